@@ -1,0 +1,139 @@
+"""`history.toml`: several tables in one history, each described as it was published."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from restore.errors import HistoryError, InputError, raise_faults
+from restore.files.delimited import Layout
+from restore.files.toml import TomlDocument, read_toml
+from restore.findings import Finding, did_you_mean
+from restore.history.conventions import CHOICES, Conventions, Table
+
+FRAME_KINDS = ("plate", "mantle", "spin-axis")
+KEYS: dict[str, type | tuple[type, ...]] = {"version": int, "title": str, "frames": dict, "table": list}
+LAYOUT_KEYS: dict[str, type | tuple[type, ...]] = {
+    "delimiter": str,
+    "comment": str,
+    "trailing_comments": bool,
+    "header": bool,
+    "decimal": str,
+    "encoding": str,
+    "columns": dict,
+}
+TABLE_KEYS: dict[str, type | tuple[type, ...]] = {
+    "file": str,
+    "title": str,
+    "citation": str,
+    **dict.fromkeys(CHOICES, str),
+    **LAYOUT_KEYS,
+    "plates": dict,
+    "rank": int,
+    "from_present": bool,
+    "join_within_myr": (int, float),
+    "rates_hold_to_ma": (int, float),
+}
+
+
+class Manifest:
+    """The tables of a manifest with their files resolved beside it, the frames and the title."""
+
+    def __init__(self, title: str, frames: dict[str, str], tables: list[Table]) -> None:
+        self.title = title
+        self.frames = frames
+        self.tables = tables
+
+
+def read_manifest(path: str | os.PathLike[str]) -> Manifest:
+    """Read `history.toml`.
+
+    Raises HistoryError with one line per fault, all faults at once.
+    """
+    document = read_toml(path, HistoryError)
+    findings: list[Finding] = []
+    _check_keys(document, document.values, KEYS, (), findings)
+    values = document.values
+    if values.get("version") != 1:
+        what = f"version = {values.get('version')!r}"
+        findings.append(_fault(document, what, "this release reads version = 1", "version"))
+    frames = values.get("frames", {})
+    for name, kind in frames.items() if isinstance(frames, dict) else ():
+        if kind not in FRAME_KINDS:
+            remedy = "must be one of " + ", ".join(FRAME_KINDS)
+            findings.append(_fault(document, f"frame kind {kind!r}", remedy, "frames", name))
+    tables = values.get("table", [])
+    if not isinstance(tables, list) or not tables:
+        findings.append(_fault(document, "no [[table]] is named", "a history needs one", "table"))
+        tables = []
+    described = [_table(document, i, table, findings) for i, table in enumerate(tables)]
+    raise_faults(HistoryError, findings)
+    return Manifest(
+        str(values.get("title", "")), dict(frames), [table for table in described if table is not None]
+    )
+
+
+def _fault(document: TomlDocument, what: str, remedy: str, *path: str | int) -> Finding:
+    return Finding("error", "manifest", document.place(*path), what, remedy=remedy)
+
+
+def _check_keys(
+    document: TomlDocument,
+    values: Mapping[str, Any],
+    known: Mapping[str, type | tuple[type, ...]],
+    path: tuple[str | int, ...],
+    findings: list[Finding],
+) -> None:
+    for key, value in values.items():
+        if key not in known:
+            findings.append(_fault(document, f"unknown key {key!r}", did_you_mean(key, known), *path, key))
+            continue
+        kinds = known[key]
+        wrong = not isinstance(value, kinds) or (isinstance(value, bool) and kinds is not bool)
+        if wrong:
+            names = {str: "a text", bool: "true or false", int: "a whole number", dict: "a table"}
+            names[list] = "an array"
+            wanted = "a number" if isinstance(kinds, tuple) else names[kinds]
+            what = f"{key} = {value!r}"
+            findings.append(_fault(document, what, f"must be {wanted}", *path, key))
+
+
+def _table(document: TomlDocument, index: int, values: object, findings: list[Finding]) -> Table | None:
+    path = ("table", index)
+    if not isinstance(values, dict):
+        findings.append(_fault(document, "table is not a table", "write [[table]]", *path))
+        return None
+    before = len(findings)
+    _check_keys(document, values, TABLE_KEYS, path, findings)
+    if "file" not in values:
+        findings.append(_fault(document, "the table names no file", "add file = '...'", *path))
+    for key in ("join_within_myr", "rates_hold_to_ma"):
+        value = values.get(key, 1)
+        if isinstance(value, (int, float)) and value < 0:
+            findings.append(_fault(document, f"{key} = {value}", "must not be negative", *path, key))
+    for key, allowed in CHOICES.items():
+        if isinstance(values.get(key), str) and values[key] not in allowed:
+            hint = "must be one of " + ", ".join(allowed)
+            findings.append(_fault(document, f"{key} = {values[key]!r}", hint, *path, key))
+    if len(findings) > before:
+        return None
+    try:
+        layout = Layout(**{"comment": "#", **{k: values[k] for k in LAYOUT_KEYS if k in values}})
+        conventions = Conventions(**{k: values[k] for k in CHOICES if k in values})
+    except InputError as exc:
+        findings.append(_fault(document, str(exc), "", *path))
+        return None
+    return Table(
+        file=os.fspath(Path(document.file).parent / values["file"]),
+        title=values.get("title", ""),
+        citation=values.get("citation", ""),
+        conventions=conventions,
+        rank=values.get("rank", 0),
+        from_present=values.get("from_present", False),
+        join_within_myr=float(values.get("join_within_myr", 0.0)),
+        rates_hold_to_ma=float(values.get("rates_hold_to_ma", 1.0)),
+        layout=layout,
+        plates=tuple((str(k), str(v)) for k, v in values.get("plates", {}).items()),
+    )
