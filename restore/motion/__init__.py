@@ -1,0 +1,1 @@
+"""What is moved: sites, and how fast; each through a Circuit, back through time."""

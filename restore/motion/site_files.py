@@ -1,0 +1,122 @@
+"""Sites from file to file in chunks, with flat memory: read, restore, write, and the evidence."""
+
+from __future__ import annotations
+
+import json
+import os
+from collections import Counter
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from restore.errors import InputError
+from restore.files.atomic import whole_file
+from restore.files.delimited import DelimitedReader, Layout
+from restore.files.tables import TableOut, csv_text
+from restore.findings import Finding
+from restore.history.circuit import Circuit
+from restore.history.ledger import Segment, entries
+from restore.motion.site_table import SiteReader
+from restore.motion.sites import SiteJob, SiteResults, restore_table
+
+CHUNK = 50_000
+MOST_WRITTEN_OUT = 10_000
+POSITION = ("restored_lat_deg", "restored_lon_deg")
+
+
+@dataclass
+class Done:
+    """What a file of sites came to: rows by status, whether one was malformed, all findings, and the
+    segments of the ledger that its results used.
+    """
+
+    counts: Counter[str] = field(default_factory=Counter)
+    malformed: bool = False
+    findings: list[Finding] = field(default_factory=list)
+    segments: dict[Segment, None] = field(default_factory=dict)
+
+
+def restore_file(
+    table: str | os.PathLike[str],
+    job: SiteJob,
+    layout: Layout,
+    out: str | os.PathLike[str] | None,
+    ledger_file: str | os.PathLike[str] | None,
+    provenance: Mapping[str, Any],
+    say: Callable[[Iterable[Finding]], None] = lambda findings: None,
+    advance: Callable[[int], None] = lambda done: None,
+) -> Done:
+    """Restore a file of sites into `out` (standard output as CSV if None), in the order of its rows.
+
+    `ledger_file`: a `.csv` of the entries that the results share, or a `.json` that also writes out
+    every link of the first 10 000 results. Raises TableError or InputError if the file as a whole
+    is at fault; then nothing is written.
+    """
+    if ledger_file is not None and Path(ledger_file).suffix.lower() not in {".csv", ".json"}:
+        raise InputError(f"{os.fspath(ledger_file)}: a ledger is written as .csv or .json")
+    done, written_out = Done(), _WrittenOut()
+    in_full = ledger_file is not None and Path(ledger_file).suffix.lower() == ".json"
+    with DelimitedReader(table, layout) as reader:
+        site_reader = SiteReader(reader, job.ages is None)
+        with TableOut(out, provenance, POSITION) as target:
+            first_row = 0
+            for chunk in reader.chunks(CHUNK):
+                results = restore_table(site_reader.parse(chunk), job, first_row)
+                first_row += len(chunk)
+                target.add(results.columns)
+                say(results.findings)
+                done.counts.update(results.counts())
+                done.malformed |= results.malformed
+                done.findings += results.findings
+                done.segments.update(dict.fromkeys(results.ledger.segments))
+                if in_full:
+                    written_out.add(results)
+                advance(reader.bytes_read())
+    if ledger_file is not None:
+        write_ledger(ledger_file, job.circuit, done.segments, written_out.results, provenance)
+    return done
+
+
+@dataclass
+class _WrittenOut:
+    """The ledger of each result with a chain: its links in full as long as they are few."""
+
+    results: list[dict[str, Any]] = field(default_factory=list)
+    rows: int = 0
+
+    def add(self, results: SiteResults) -> None:
+        few = self.rows + len(results) <= MOST_WRITTEN_OUT
+        ledger = results.with_details() if few else results.ledger
+        ids = ledger.id_column()
+        names = results.columns.get("site")
+        for item in np.flatnonzero(ledger.segment >= 0).tolist():
+            record: dict[str, Any] = {"row": self.rows + item}
+            if names is not None:
+                record["site"] = names[item]
+            record |= {"restored_age_ma": float(ledger.ages[item]), "ledger_id": ids[item]}
+            if few:
+                record["links"] = ledger.links_of(item)
+            self.results.append(record)
+        self.rows += len(results)
+
+
+def write_ledger(
+    file: str | os.PathLike[str],
+    circuit: Circuit,
+    segments: Iterable[Segment],
+    results: Sequence[Mapping[str, Any]],
+    provenance: Mapping[str, Any],
+) -> None:
+    """Write the entries that results share, as `.csv` or, with the results themselves, as `.json`."""
+    columns = entries(circuit, segments)
+    with whole_file(file) as part:
+        if Path(file).suffix.lower() == ".csv":
+            part.write_text(csv_text(columns), encoding="utf-8")
+            return
+        rows = zip(*columns.values(), strict=True)
+        records = [dict(zip(columns, row, strict=True)) for row in rows]
+        content = {"provenance": provenance, "entries": records, "results": list(results)}
+        part.write_text(json.dumps(content, indent=1, allow_nan=False) + "\n", encoding="utf-8")

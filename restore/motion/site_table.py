@@ -1,0 +1,224 @@
+"""A table of dated sites: the user's own columns untouched, and what was understood of them."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from restore.errors import TableError
+from restore.files.delimited import Chunk, DelimitedReader, parse_numbers
+from restore.findings import Finding, Place
+from restore.geometry.sphere import Floats
+from restore.history.rows import OLDEST_AGE_MA
+
+NUMBERS = (
+    "lat_deg",
+    "lon_deg",
+    "age_ma",
+    "age_sigma_myr",
+    "age_young_ma",
+    "age_old_ma",
+    "host_age_ma",
+    "position_sigma_km",
+)
+AGES = ("age_ma", "age_young_ma", "age_old_ma", "host_age_ma")
+ERRORS = ("age_sigma_myr", "position_sigma_km")
+KNOWN_COLUMNS = ("site", *NUMBERS, "plate")
+
+
+@dataclass(eq=False)
+class SiteTable:
+    """Sites `(n,)`: `own` are the user's columns as they stand, by name in their order.
+
+    `numbers`: parsed columns in degrees, Ma, Myr and km, NaN where there is no value. `bad_place`,
+    `bad_age`: rows whose coordinates or ages cannot be used. `ranged`: rows with an age range.
+    `findings`: one per fault, with its place.
+    """
+
+    own: dict[str, Sequence[Any]]
+    site: Sequence[str]
+    plate: list[str]
+    numbers: dict[str, Floats]
+    bad_place: NDArray[np.bool_]
+    bad_age: NDArray[np.bool_]
+    findings: list[Finding]
+    has_ranges: bool
+    file: str = "sites"
+    lines: Sequence[int] = ()
+    plate_column: int | None = None
+
+    def plate_place(self, row: int) -> Place:
+        """Where the plate label of a row stands."""
+        column = None if self.plate_column is None else self.plate_column + 1
+        return Place(self.file, self.lines[row] if self.lines else row, column)
+
+    def __len__(self) -> int:
+        return len(self.plate)
+
+    @property
+    def ranged(self) -> NDArray[np.bool_]:
+        """Rows whose age is given as a range."""
+        young, old = self.numbers["age_young_ma"], self.numbers["age_old_ma"]
+        return ~np.isnan(young) & ~np.isnan(old) & ~self.bad_age
+
+    def representative_age(self) -> Floats:
+        """The age of each site, of a range without one the middle; NaN where there is none."""
+        numbers = self.numbers
+        middle = 0.5 * (numbers["age_young_ma"] + numbers["age_old_ma"])
+        age = np.where(np.isnan(numbers["age_ma"]), middle, numbers["age_ma"])
+        return np.where(self.bad_age, np.nan, age)
+
+
+class SiteReader:
+    """Finds the columns of a site table once and parses its chunks."""
+
+    def __init__(self, reader: DelimitedReader, own_ages: bool) -> None:
+        self.reader = reader
+        for name in reader.layout.columns:
+            if name not in KNOWN_COLUMNS:
+                known = ", ".join(KNOWN_COLUMNS)
+                raise TableError(f"{reader.file}: column map: {name!r} is not one of {known}")
+        self.at = {
+            name: reader.column(name, required=name in {"lat_deg", "lon_deg"}) for name in KNOWN_COLUMNS
+        }
+        ranged = [name for name in ("age_young_ma", "age_old_ma") if self.at[name] is not None]
+        if len(ranged) == 1:
+            missing = {"age_young_ma", "age_old_ma"} - set(ranged)
+            raise TableError(
+                f"{reader.file}:{reader.header_line}: {ranged[0]} stands without {missing.pop()};"
+                " an age range needs both"
+            )
+        self.has_ranges = bool(ranged)
+        if own_ages and self.at["age_ma"] is None and not ranged:
+            reader.column("age_ma")
+
+    def parse(self, chunk: Chunk) -> SiteTable:
+        """The sites of one chunk; faults become findings, never lost rows."""
+        decimal = self.reader.layout.decimal
+        numbers: dict[str, Floats] = {}
+        findings: list[Finding] = []
+        count = len(chunk)
+        bad = {"place": np.zeros(count, dtype=bool), "age": np.zeros(count, dtype=bool)}
+        for name in NUMBERS:
+            values, faults = parse_numbers(chunk, self.at[name], name, decimal)
+            numbers[name] = np.array(values, dtype=np.float64)
+            if faults:
+                row_of = {line: row for row, line in enumerate(chunk.lines)}
+                group = "place" if name in {"lat_deg", "lon_deg"} else "age"
+                for fault in faults:
+                    bad[group][row_of[fault.place.line or 0]] = True
+                findings += faults
+        for row in sorted({*chunk.surplus, *chunk.short}):
+            wrong_length = self.reader.length_fault(chunk, row)
+            if wrong_length is not None:
+                findings.append(wrong_length)
+                bad["place"][row] = True
+        self._check_ranges(chunk, numbers, bad, findings)
+        labels = self.at["plate"]
+        plate = [""] * count if labels is None else [text.strip() for text in chunk.columns[labels]]
+        names = self.at["site"]
+        site = chunk.columns[names] if names is not None else [str(line) for line in chunk.lines]
+        own: dict[str, Sequence[Any]] = dict(zip(chunk.header, chunk.columns, strict=True))
+        if chunk.surplus:
+            mark = self.reader.layout.delimiter
+            own["surplus_fields"] = [mark.join(chunk.surplus.get(r, [])) for r in range(count)]
+        findings.sort(key=lambda f: (f.place.line or 0, f.place.column or 0))
+        return SiteTable(
+            own,
+            site,
+            plate,
+            numbers,
+            bad["place"],
+            bad["age"],
+            findings,
+            self.has_ranges,
+            chunk.file,
+            chunk.lines,
+            labels,
+        )
+
+    def _check_ranges(
+        self,
+        chunk: Chunk,
+        numbers: Mapping[str, Floats],
+        bad: Mapping[str, NDArray[np.bool_]],
+        findings: list[Finding],
+    ) -> None:
+        for group, name, wrong, rule in range_faults(numbers):
+            fresh = wrong & ~bad[group]
+            bad[group][fresh] = True
+            for row in np.flatnonzero(fresh):
+                value = numbers[name][row]
+                what = f"{name} = {value:g}"
+                if np.isnan(value):
+                    column = self.at[name]
+                    text = chunk.columns[column][row].strip() if column is not None else ""
+                    what = f"{name} = {text!r}" if text else f"{name} is empty"
+                place = chunk.place(int(row), self.at[name])
+                findings.append(Finding("error", "bad value", place, what, remedy=rule))
+
+
+def range_faults(numbers: Mapping[str, Floats]) -> list[tuple[str, str, NDArray[np.bool_], str]]:
+    """What values cannot be: (group, column, rows at fault, what would be right)."""
+    lat, lon = numbers["lat_deg"], numbers["lon_deg"]
+    faults = [
+        ("place", "lat_deg", ~(np.abs(lat) <= 90.0), "a latitude must lie in -90..90"),
+        ("place", "lon_deg", ~(np.abs(lon) <= 360.0), "a longitude must lie in -360..360"),
+    ]
+    for name in AGES:
+        wrong = ~np.isnan(numbers[name]) & ~((numbers[name] >= 0.0) & (numbers[name] <= OLDEST_AGE_MA))
+        faults.append(("age", name, wrong, f"ages lie in 0..{OLDEST_AGE_MA:g} Ma, positive into the past"))
+    for name in ERRORS:
+        wrong = ~np.isnan(numbers[name]) & ~((numbers[name] >= 0.0) & np.isfinite(numbers[name]))
+        faults.append(("age", name, wrong, "must not be negative"))
+    young, old = numbers["age_young_ma"], numbers["age_old_ma"]
+    half = np.isnan(young) != np.isnan(old)
+    faults.append(("age", "age_young_ma", half & np.isnan(young), "a range needs both its ends"))
+    faults.append(("age", "age_old_ma", half & np.isnan(old), "a range needs both its ends"))
+    rule = "age_young_ma must not be above age_old_ma"
+    faults.append(("age", "age_young_ma", young > old, rule))
+    age = numbers["age_ma"]
+    outside = (age < young) | (age > old)
+    faults.append(("age", "age_ma", outside, "must lie between age_young_ma and age_old_ma"))
+    return faults
+
+
+def table_from_columns(columns: Mapping[str, Sequence[Any]], own_ages: bool) -> SiteTable:
+    """A site table from columns in memory (a dict of sequences, or a pandas DataFrame).
+
+    Raises TableError if a column is missing; values that cannot be used become findings that name
+    the row, counted from 0.
+    """
+    names = [str(name) for name in columns]
+    for name in ("lat_deg", "lon_deg", *(("age_ma",) if own_ages and "age_old_ma" not in names else ())):
+        if name not in names:
+            raise TableError(f"sites: column {name!r} is missing; the columns are {', '.join(names)}")
+    own: dict[str, Sequence[Any]] = {name: list(columns[name]) for name in names}
+    count = len(own["lat_deg"])
+    nan = np.full(count, np.nan)
+    try:
+        numbers = {
+            name: np.array([np.nan if v is None else v for v in own[name]], dtype=np.float64)
+            if name in own
+            else nan.copy()
+            for name in NUMBERS
+        }
+    except (TypeError, ValueError) as exc:
+        raise TableError(f"sites: a column of numbers holds something else: {exc}") from None
+    findings: list[Finding] = []
+    bad = {"place": np.zeros(count, dtype=bool), "age": np.zeros(count, dtype=bool)}
+    chunk = Chunk("sites", names, [], list(range(count)), {}, {})
+    for group, name, wrong, rule in range_faults(numbers):
+        fresh = wrong & ~bad[group]
+        bad[group][fresh] = True
+        for row in np.flatnonzero(fresh):
+            what = f"{name} = {numbers[name][row]:g}"
+            findings.append(Finding("error", "bad value", chunk.place(int(row)), what, remedy=rule))
+    labels = own.get("plate", [""] * count)
+    plate = ["" if v is None or v != v else str(v) for v in labels]
+    site = [str(v) for v in own.get("site", range(count))]
+    return SiteTable(own, site, plate, numbers, bad["place"], bad["age"], findings, "age_old_ma" in names)
