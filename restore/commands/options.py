@@ -1,0 +1,213 @@
+"""Options and small doings that the commands share. Nothing here loads numpy by itself."""
+
+from __future__ import annotations
+
+import json
+import os
+import sys
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from contextlib import contextmanager
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import click
+
+from restore.errors import InputError
+from restore.motion.ages import parse_ages
+
+if TYPE_CHECKING:
+    from restore.files.delimited import Layout
+    from restore.findings import Finding
+    from restore.history.store import History
+
+Decorated = TypeVar("Decorated", bound=Callable[..., Any])
+BEYOND = ("refuse", "hold", "extend")
+LATITUDES = ("as-given", "geodetic")
+
+
+class Ages(click.ParamType[Any]):
+    """own, 0,10,20 or 0:120:10."""
+
+    name = "ages"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
+        try:
+            return parse_ages(value)
+        except InputError as exc:
+            self.fail(str(exc), param, ctx)
+
+
+class Numbers(click.ParamType[Any]):
+    """Some numbers separated by commas; the first may be a latitude."""
+
+    name = "numbers"
+
+    def __init__(self, *names: str) -> None:
+        self.names = names
+
+    def get_metavar(self, param: click.Parameter, ctx: click.Context) -> str:
+        return ",".join(self.names)
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
+        if isinstance(value, tuple):
+            return value
+        parts = value.split(",")
+        try:
+            numbers = tuple(float(part) for part in parts)
+        except ValueError:
+            numbers = ()
+        if len(numbers) != len(self.names) or not all(abs(n) < float("inf") for n in numbers):
+            self.fail(f"{value!r}: write {','.join(self.names)}", param, ctx)
+        if self.names[0] == "LAT" and not -90.0 <= numbers[0] <= 90.0:
+            self.fail(f"{value!r}: a latitude must lie in -90..90", param, ctx)
+        if self.names[:2] == ("LAT", "LON") and not -360.0 <= numbers[1] <= 360.0:
+            self.fail(f"{value!r}: a longitude must lie in -360..360", param, ctx)
+        return numbers
+
+
+class Age(click.ParamType[Any]):
+    """One age, Ma."""
+
+    name = "Ma"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
+        try:
+            age = float(value)
+        except ValueError:
+            self.fail(f"{value!r} is not a number", param, ctx)
+        if not 0.0 <= age < float("inf"):
+            self.fail(f"{value!r}: an age is finite, in Ma, positive into the past", param, ctx)
+        return age
+
+
+def history_option(required: bool = True) -> Callable[[Decorated], Decorated]:
+    """--history."""
+    return click.option(
+        "--history", "history_file", required=required, metavar="FILE",
+        help="Rotation history: a .csv table, a .toml manifest or a .nc file.",
+    )  # fmt: skip
+
+
+def radius_option(command: Decorated) -> Decorated:
+    """--radius-km."""
+    return click.option(
+        "--radius-km",
+        type=click.FloatRange(min=0, min_open=True),
+        default=6371.0088,
+        show_default=True,
+        help="Radius of the sphere.",
+    )(command)
+
+
+def convention_options(command: Decorated) -> Decorated:
+    """--latitudes and --beyond: what numbers mean."""
+    for option in (
+        click.option("--beyond", type=click.Choice(BEYOND), default="refuse", show_default=True,
+                     help="Past the oldest row: refuse, hold the last place, or extend the last stage."),
+        click.option("--latitudes", type=click.Choice(LATITUDES), default="as-given", show_default=True,
+                     help="What latitudes are: used as given, or geodetic (GRS80)."),
+    ):  # fmt: skip
+        command = option(command)
+    return command
+
+
+def layout_options(command: Decorated) -> Decorated:
+    """--delimiter, --decimal, --comment, --encoding, --columns: how the table of sites is written."""
+    for option in (
+        click.option("--columns", metavar="OURS=THEIRS,...", default="",
+                     help="Column map: by name or number, as lat_deg=Lat,lon_deg=3."),
+        click.option("--no-header", is_flag=True, help="The table has no header; map columns by number."),
+        click.option("--encoding", default="utf-8-sig", help="Encoding of the table (utf-8)."),
+        click.option("--comment", default="", help="Lines that start with this are passed over."),
+        click.option("--decimal", type=click.Choice([".", ","]), default=".", help="Decimal mark."),
+        click.option("--delimiter", default=",", show_default=True,
+                     help="One character, or comma, semicolon, tab, space, bar, whitespace."),
+    ):  # fmt: skip
+        command = option(command)
+    return command
+
+
+def debug_option(command: Decorated) -> Decorated:
+    """--debug, which is taken off before the command sees its arguments."""
+    return click.option("--debug", is_flag=True, expose_value=False,
+                        help="Show the traceback of an error.")(command)  # fmt: skip
+
+
+def make_layout(
+    delimiter: str, decimal: str, comment: str, encoding: str, no_header: bool, columns: str
+) -> Layout:
+    """The layout that the options describe."""
+    from restore.files.delimited import Layout
+
+    mapping: dict[str, str | int] = {}
+    for part in filter(None, columns.split(",")):
+        ours, equals, theirs = part.partition("=")
+        if not equals or not theirs.strip():
+            raise click.BadParameter(f"{part!r}: write ours=theirs", param_hint="--columns")
+        name = theirs.strip()
+        mapping[ours.strip()] = int(name) if name.isdigit() else name
+    return Layout(
+        delimiter=delimiter,
+        comment=comment,
+        header=not no_header,
+        decimal=decimal,
+        encoding=encoding,
+        columns=mapping,
+    )
+
+
+def read_history(path: str) -> History:
+    """Read a history and say its warnings on standard error."""
+    from restore.history.store import History
+
+    history = History.read(path)
+    say_findings(history.findings)
+    return history
+
+
+def history_inputs(path: str, history: History) -> list[str]:
+    """The files behind a history: itself, and a manifest's tables."""
+    tables = [] if path.endswith((".nc", ".nc4")) else [table.file for table in history.tables]
+    return [path, *tables]
+
+
+MOST_SAID = 100
+
+
+def say_findings(findings: Iterable[Finding]) -> None:
+    """One line per finding on standard error; past a hundred only their number."""
+    listed = list(findings)
+    for finding in listed[:MOST_SAID]:
+        click.echo(f"{finding.severity}: {finding.line()}", err=True)
+    if len(listed) > MOST_SAID:
+        click.echo(f"... and {len(listed) - MOST_SAID} more", err=True)
+
+
+def print_json(value: Any) -> None:
+    """A value as JSON on standard output."""
+    click.echo(json.dumps(value, indent=2, allow_nan=False))
+
+
+def default_threads() -> int:
+    """Threads for the hot path; they never change a result."""
+    return min(4, os.cpu_count() or 1)
+
+
+@contextmanager
+def progress(path: str) -> Iterator[Callable[[int], None]]:
+    """A bar on a terminal over the bytes of a file, shown once there is a second chunk; else nothing."""
+    if not sys.stderr.isatty():
+        yield lambda done: None
+        return
+    from rich.console import Console
+    from rich.progress import Progress
+
+    total = os.path.getsize(path) if os.path.isfile(path) else None
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task(os.path.basename(path), total=total)
+        yield lambda done: bar.update(task, completed=done)
+
+
+def say_counts(counts: Mapping[str, int]) -> None:
+    """How many rows have each status, on standard error."""
+    said = ", ".join(f"{number} {status}" for status, number in sorted(counts.items()))
+    click.echo(f"{sum(counts.values())} rows: {said}" if said else "0 rows", err=True)

@@ -1,0 +1,109 @@
+"""`oncewhere rates`: how fast a plate moves relative to another, at points."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from restore.commands.options import (
+    Age,
+    Numbers,
+    convention_options,
+    debug_option,
+    history_inputs,
+    history_option,
+    layout_options,
+    make_layout,
+    radius_option,
+    read_history,
+)
+
+if TYPE_CHECKING:
+    from restore.files.delimited import Layout
+
+
+@click.command()
+@click.option("--plate", help="The plate that moves.")
+@click.option("--relative-to", metavar="OTHER", help="The plate or frame held still.")
+@click.option("--at", type=Numbers("LAT", "LON"), help="One point.")
+@click.option("--points", metavar="FILE", help="A table of points: lat_deg, lon_deg and any others.")
+@click.option("--age", "age_ma", type=Age(), default=0.0, show_default=True, help="Age, Ma.")
+@click.option(
+    "--at-on", type=click.Choice(["plate", "relative-to"]), default="plate", show_default=True,
+    help="The points are today's on the plate, or positions in OTHER's coordinates at that age.",
+)  # fmt: skip
+@history_option(required=False)
+@click.option("--pole", type=Numbers("LAT", "LON", "DEG_PER_MYR"), help="Instead of a history.")
+@click.option("--out", metavar="FILE", help="Write here: .csv, .json, .geojson, .nc, .parquet, .gpkg.")
+@convention_options
+@radius_option
+@layout_options
+@debug_option
+def rates(
+    plate: str | None,
+    relative_to: str | None,
+    at: tuple[float, float] | None,
+    points: str | None,
+    age_ma: float,
+    at_on: str,
+    history_file: str | None,
+    pole: tuple[float, float, float] | None,
+    out: str | None,
+    beyond: str,
+    radius_km: float,
+    latitudes: str,
+    **layout: Any,
+) -> None:
+    """Velocities in mm/yr: east, north, speed, azimuth, with the errors of the rows.
+
+    \b
+    oncewhere rates --pole 56,-94,0.76 --at -28,-71
+    oncewhere rates --plate ovrath --relative-to quemmel --at 10,-30 --history scenario_files/history.toml
+    """
+    if (at is None) == (points is None):
+        raise click.UsageError("give either --at LAT,LON or --points FILE")
+    if (history_file is None) == (pole is None):
+        raise click.UsageError("give either --history FILE or --pole LAT,LON,DEG_PER_MYR")
+    if pole is None and (plate is None or relative_to is None):
+        raise click.UsageError("with --history give --plate and --relative-to")
+    from restore.files.tables import TableOut
+    from restore.geometry.latitudes import Latitudes
+    from restore.motion.rates import rates as rates_at
+    from restore.motion.rates import rates_from_pole
+    from restore.scenario.provenance import provenance
+
+    kind = Latitudes(latitudes)
+    own, lat, lon = (
+        ({}, [at[0]], [at[1]]) if at is not None else _read_points(str(points), make_layout(**layout))
+    )
+    inputs = [] if points is None else [points]
+    if pole is not None:
+        found = rates_from_pole(*pole, lat, lon, kind, radius_km)
+    else:
+        assert history_file is not None
+        assert plate is not None
+        assert relative_to is not None
+        history = read_history(history_file)
+        inputs += history_inputs(history_file, history)
+        found = rates_at(history, plate, relative_to, lat, lon, age_ma, at_on, kind, radius_km, beyond)
+    settings: dict[str, Any] = {
+        "plate": plate,
+        "relative_to": relative_to,
+        "age_ma": age_ma,
+        "at_on": at_on,
+    }
+    settings |= {"pole": pole, "latitudes": latitudes, "radius_km": radius_km}
+    columns: dict[str, Any] = {**own, **found.columns()}
+    count = len(found.lat_deg)
+    said = {"plate": plate or "", "relative_to": relative_to or "", "latitudes": latitudes}
+    said["errors"] = "error of rows only" if pole is None else "not known"
+    columns |= {name: [value] * count for name, value in said.items() if name not in own}
+    with TableOut(out, provenance(inputs, settings), ("then_lat_deg", "then_lon_deg")) as target:
+        target.add(columns)
+
+
+def _read_points(file: str, layout: Layout) -> tuple[dict[str, list[str]], list[float], list[float]]:
+    from restore.files.points import read_points
+
+    return read_points(file, layout)

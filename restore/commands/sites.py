@@ -1,0 +1,96 @@
+"""`oncewhere sites`: dated sites restored, streamed from file to file."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import click
+
+from restore.commands.options import (
+    Ages,
+    convention_options,
+    debug_option,
+    default_threads,
+    history_inputs,
+    history_option,
+    layout_options,
+    make_layout,
+    progress,
+    radius_option,
+    read_history,
+    say_counts,
+    say_findings,
+)
+
+FRAME_KINDS = ("plate", "mantle", "spin-axis")
+
+
+@click.command()
+@click.argument("table")
+@history_option()
+@click.option("--frame", required=True, help="The plate or frame that positions are given in.")
+@click.option("--frame-kind", type=click.Choice(FRAME_KINDS), help="Kind of the frame, if the history"
+              " does not say.")  # fmt: skip
+@click.option("--ages", type=Ages(), default="own", show_default=True, help="own, 0,10,20 or 0:120:10.")
+@click.option("--out", metavar="FILE", help="Write here: .csv, .json, .geojson, .nc, .parquet, .gpkg.")
+@click.option("--ledger", "ledger_file", metavar="FILE", help="Write the evidence: .csv or .json.")
+@click.option("--draws", type=click.IntRange(min=1), help="Monte Carlo answers besides the linear ones.")
+@click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Of the draws.")
+@click.option("--strict", is_flag=True, help="Exit 1 if any row is not restored.")
+@convention_options
+@radius_option
+@layout_options
+@debug_option
+def sites(
+    table: str,
+    history_file: str,
+    frame: str,
+    frame_kind: str | None,
+    ages: tuple[float, ...] | None,
+    out: str | None,
+    ledger_file: str | None,
+    draws: int | None,
+    seed: int,
+    strict: bool,
+    beyond: str,
+    radius_km: float,
+    latitudes: str,
+    **layout: Any,
+) -> int:
+    """Restore the sites in TABLE to where they stood, with 95 % ellipses.
+
+    \b
+    oncewhere sites scenario_files/cores.csv --history scenario_files/history.toml --frame deep
+    """
+    from restore.geometry.latitudes import Latitudes
+    from restore.history.circuit import Circuit
+    from restore.motion.draws import Draws
+    from restore.motion.site_files import restore_file
+    from restore.motion.sites import SiteJob
+    from restore.scenario.provenance import provenance
+
+    history = read_history(history_file)
+    job = SiteJob(
+        Circuit(history, frame, beyond),
+        ages,
+        Latitudes(latitudes),
+        radius_km,
+        frame_kind or history.kind_of(frame),
+        default_threads(),
+        None if draws is None else Draws(draws, seed),
+    )
+    settings = {
+        "frame": frame,
+        "frame_kind": job.frame_kind,
+        "ages": "own" if ages is None else list(ages),
+        "latitudes": latitudes,
+        "radius_km": radius_km,
+        "beyond": beyond,
+    }
+    trail = provenance([table, *history_inputs(history_file, history)], settings)
+    with progress(table) as advance:
+        done = restore_file(
+            table, job, make_layout(**layout), out, ledger_file, trail, say_findings, advance
+        )
+    say_counts(done.counts)
+    return 1 if done.malformed or (strict and set(done.counts) - {"restored"}) else 0

@@ -1,0 +1,305 @@
+"""A scenario run: audit, tasks one after the other, and a record of everything in `run.json`."""
+
+from __future__ import annotations
+
+import json
+import os
+import time
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from restore.errors import InputError, OncewhereError, ScenarioError, raise_faults
+from restore.files.atomic import whole_file
+from restore.files.delimited import DelimitedReader, Layout
+from restore.files.points import read_points
+from restore.files.tables import TableOut, csv_text, texts
+from restore.findings import Finding, did_you_mean
+from restore.geometry.latitudes import Latitudes
+from restore.history.audit import audit
+from restore.history.circuit import Circuit
+from restore.history.ledger import Segment, entries
+from restore.history.store import History
+from restore.motion.ages import parse_ages
+from restore.motion.draws import Draws
+from restore.motion.rates import rates
+from restore.motion.site_files import restore_file
+from restore.motion.sites import SiteJob
+from restore.scenario.provenance import (
+    CAUTION,
+    command_line,
+    input_records,
+    provenance,
+    sha256_of,
+    versions,
+)
+from restore.scenario.schema import RatesTask, Scenario, SitesTask, TablePart, read_scenario
+
+RECORD = "run.json"
+
+
+@dataclass
+class Run:
+    """What a run came to: the folder, each task's record, and all findings."""
+
+    folder: Path
+    tasks: dict[str, dict[str, Any]] = field(default_factory=dict)
+    findings: list[Finding] = field(default_factory=list)
+
+    @property
+    def failed(self) -> bool:
+        """Whether a task failed or a row was malformed."""
+        return any(record["state"] != "done" for record in self.tasks.values()) or any(
+            finding.severity == "error" for finding in self.findings
+        )
+
+
+def run_scenario(
+    path: str | os.PathLike[str],
+    out: str | os.PathLike[str] | None = None,
+    go_on: bool = False,
+    threads: int = 1,
+    say: Callable[[str], None] = lambda line: None,
+) -> Run:
+    """Run a scenario into a new folder (`out`, or `<scenario>-results` beside it).
+
+    With `go_on` a folder of an earlier run is continued: tasks whose inputs and settings are
+    unchanged and whose file is as it was are not done again. Raises ScenarioError with all faults of
+    the scenario at once, HistoryError for its history, InputError if the folder is there already.
+    """
+    scenario = read_scenario(path)
+    history = History.read(scenario.history_file)
+    _check_labels(scenario, history)
+    folder = Path(out) if out is not None else Path(path).with_name(f"{Path(path).stem}-results")
+    before = _make_folder(folder, go_on)
+    run = Run(folder)
+    run.findings += audit(history, scenario.root.frame.name)
+    runner = _Runner(scenario, history, run, threads)
+    for task in scenario.tasks:
+        kept = runner.unchanged(task, before.get(task.name))
+        say(f"{task.name}: {'kept' if kept else task.kind}")
+        run.tasks[task.name] = kept or runner.do(task)
+        runner.write_record()
+    runner.write_findings()
+    runner.write_ledger()
+    runner.write_record()
+    return run
+
+
+def _make_folder(folder: Path, go_on: bool) -> dict[str, Any]:
+    if folder.exists():
+        if not folder.is_dir():
+            raise InputError(f"{folder}: is a file; results go into a folder")
+        record = folder / RECORD
+        if not go_on:
+            if any(folder.iterdir()):
+                raise InputError(f"{folder}: is there already; name another with --out, or --continue")
+        elif record.is_file():
+            try:
+                before: dict[str, Any] = json.loads(record.read_text(encoding="utf-8"))["tasks"]
+                return before
+            except (ValueError, KeyError, TypeError):
+                raise InputError(f"{record}: is no record of a run; name a new folder") from None
+        return {}
+    try:
+        folder.mkdir(parents=True)
+    except OSError as exc:
+        raise InputError(f"{folder}: cannot be made: {exc.strerror}") from None
+    return {}
+
+
+def _check_labels(scenario: Scenario, history: History) -> None:
+    """Labels that the scenario names must stand in the history, and the frame must be what it says."""
+    known = history.plates()
+    root = scenario.root
+    named: list[tuple[tuple[str | int, ...], str]] = [(("frame", "name"), root.frame.name)]
+    for index, task in enumerate(scenario.tasks):
+        if isinstance(task, RatesTask):
+            named.append((("task", index, "plate"), task.plate))
+            named.append((("task", index, "relative_to"), task.relative_to))
+    findings = []
+    for path, label in named:
+        if label not in known:
+            what = f"{path[-1]} = {label!r} is not in the history"
+            place = scenario.document.place(*path)
+            findings.append(Finding("error", "scenario", place, what, remedy=did_you_mean(label, known)))
+    stated = history.frames.get(root.frame.name)
+    if stated is not None and stated != root.frame.kind:
+        what = f"frame.kind = {root.frame.kind!r}"
+        remedy = f"the history says that {root.frame.name} is of kind {stated}"
+        place = scenario.document.place("frame", "kind")
+        findings.append(Finding("error", "scenario", place, what, remedy=remedy))
+    raise_faults(ScenarioError, findings)
+
+
+def layout_of(part: TablePart) -> Layout:
+    """The layout that a task's `table` describes."""
+    return Layout(
+        delimiter=part.delimiter,
+        comment=part.comment,
+        header=part.header,
+        decimal=part.decimal,
+        encoding=part.encoding,
+        columns=dict(part.columns),
+    )
+
+
+class _Runner:
+    """Does the tasks of one run and keeps its record."""
+
+    def __init__(self, scenario: Scenario, history: History, run: Run, threads: int) -> None:
+        self.scenario = scenario
+        self.history = history
+        self.run = run
+        self.threads = threads
+        root = scenario.root
+        self.circuit = Circuit(history, root.frame.name, root.conventions.beyond)
+        self.latitudes = Latitudes(root.conventions.latitudes)
+        tables = [] if scenario.history_file.endswith((".nc", ".nc4")) else history.tables
+        self.history_inputs = [scenario.history_file, *(table.file for table in tables)]
+        self.segments: dict[Segment, None] = {}
+        self.began = time.time()
+
+    def settings(self, task: SitesTask | RatesTask) -> dict[str, Any]:
+        """All that decides a task's result besides its inputs."""
+        root = self.scenario.root
+        return {
+            "frame": root.frame.name,
+            "frame_kind": root.frame.kind,
+            **root.conventions.model_dump(),
+            "task": task.model_dump(),
+        }
+
+    def inputs(self, task: SitesTask | RatesTask) -> list[str]:
+        """The files behind a task."""
+        return [self.scenario.path(task.file), *self.history_inputs]
+
+    def unchanged(
+        self, task: SitesTask | RatesTask, before: dict[str, Any] | None
+    ) -> dict[str, Any] | None:
+        """The earlier record of a task that need not be done again."""
+        if not before or before.get("state") != "done":
+            return None
+        same = before.get("settings") == json.loads(json.dumps(self.settings(task)))
+        same = same and before.get("inputs") == input_records(self.inputs(task))
+        for name, digest in before.get("files", {}).items():
+            path = self.run.folder / name
+            same = same and path.is_file() and sha256_of(path) == digest
+        return before if same else None
+
+    def do(self, task: SitesTask | RatesTask) -> dict[str, Any]:
+        """Do one task; a fault in its data fails it and not the others."""
+        settings, inputs = self.settings(task), self.inputs(task)
+        record: dict[str, Any] = {"kind": task.kind, "state": "done", "settings": settings}
+        record["inputs"] = input_records(inputs)
+        trail = provenance(inputs, settings)
+        try:
+            if isinstance(task, SitesTask):
+                names = self._sites(task, trail, record)
+            else:
+                names = self._rates(task, trail)
+            record["files"] = {name: sha256_of(self.run.folder / name) for name in names}
+        except OncewhereError as exc:
+            record |= {"state": "failed", "reason": str(exc)}
+            place = self.scenario.document.place("task", self.scenario.tasks.index(task))
+            for line in str(exc).splitlines():
+                self.run.findings.append(Finding("error", "task failed", place, f"{task.name}: {line}"))
+        return record
+
+    def _sites(self, task: SitesTask, trail: dict[str, Any], record: dict[str, Any]) -> list[str]:
+        job = SiteJob(
+            self.circuit,
+            parse_ages(task.ages),
+            self.latitudes,
+            self.scenario.root.conventions.radius_km,
+            self.scenario.root.frame.kind,
+            self.threads,
+            None if task.draws is None else Draws(task.draws, task.seed),
+        )
+        name = f"{task.name}.csv"
+        table = self.scenario.path(task.file)
+        done = restore_file(table, job, layout_of(task.table), self.run.folder / name, None, trail)
+        record["rows"] = dict(sorted(done.counts.items()))
+        self.run.findings += done.findings
+        self.segments.update(done.segments)
+        return [name]
+
+    def _rates(self, task: RatesTask, trail: dict[str, Any]) -> list[str]:
+        conventions = self.scenario.root.conventions
+        own, lat, lon = read_points(self.scenario.path(task.file), layout_of(task.table))
+        found = rates(
+            self.history,
+            task.plate,
+            task.relative_to,
+            lat,
+            lon,
+            task.age_ma,
+            task.at_on,
+            self.latitudes,
+            conventions.radius_km,
+            conventions.beyond,
+        )
+        columns: dict[str, Any] = {**own, **found.columns()}
+        said = {"plate": task.plate, "relative_to": task.relative_to}
+        said |= {"latitudes": conventions.latitudes, "errors": "error of rows only"}
+        columns |= {name: [text] * len(lat) for name, text in said.items() if name not in own}
+        name = f"{task.name}.csv"
+        with TableOut(self.run.folder / name, trail) as target:
+            target.add(columns)
+        return [name]
+
+    def write_findings(self) -> None:
+        """Write `findings.csv`: those of the audit and of every task."""
+        columns = [finding.as_record() for finding in self.run.findings]
+        names = ["severity", "kind", "file", "line", "column", "what", "km", "remedy"]
+        table = {name: [record[name] for record in columns] for name in names}
+        with whole_file(self.run.folder / "findings.csv") as part:
+            part.write_text(csv_text(table), encoding="utf-8")
+
+    def write_ledger(self) -> None:
+        """Write `ledger.csv`: the entries that results of all tasks share; kept tasks' entries stay."""
+        path = self.run.folder / "ledger.csv"
+        columns = entries(self.circuit, self.segments)
+        if path.is_file():
+            with DelimitedReader(path) as reader:
+                (before,) = reader.chunks(size=2**62)
+            if before.header == list(columns):
+                fresh = set(columns["ledger_id"])
+                kept = [row for row in zip(*before.columns, strict=True) if row[0] not in fresh]
+                rows = [*kept, *(zip(*(texts(n, v) for n, v in columns.items()), strict=True))]
+                rows.sort(key=lambda row: (row[0], int(row[1])))
+                columns = {name: [row[i] for row in rows] for i, name in enumerate(columns)}
+        with whole_file(path) as part:
+            part.write_text(csv_text(columns), encoding="utf-8")
+
+    def write_record(self) -> None:
+        """Write `run.json` as it stands."""
+        root = self.scenario.root
+        record = {
+            "title": root.title,
+            "made_by": versions(),
+            "command": command_line(),
+            "began_utc": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(self.began)),
+            "seconds": round(time.time() - self.began, 3),
+            "scenario": input_records([self.scenario.document.file])[0],
+            "inputs": input_records(self.history_inputs),
+            "frame": root.frame.model_dump(),
+            "conventions": root.conventions.model_dump(),
+            "errors": "error of rows (and of sites where said); the model's own error is not in them",
+            "caution": CAUTION,
+            "tasks": self.run.tasks,
+        }
+        with whole_file(self.run.folder / RECORD) as part:
+            part.write_text(json.dumps(record, indent=2, allow_nan=False) + "\n", encoding="utf-8")
+
+
+def said_tasks(run: Run) -> Iterable[str]:
+    """One line per task: what became of it."""
+    for name, record in run.tasks.items():
+        rows = record.get("rows")
+        detail = ""
+        if rows:
+            detail = " (" + ", ".join(f"{number} {status}" for status, number in rows.items()) + ")"
+        files = ", ".join(record.get("files", {}))
+        yield f"{name}: {record['state']}{detail} {files or record.get('reason', '')}".rstrip()

@@ -1,0 +1,251 @@
+"""The scenario file, version 1: read, checked as a whole, and every fault said with its place."""
+
+from __future__ import annotations
+
+import os
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, StrictBool, StrictStr, ValidationError, field_validator
+
+from restore.errors import InputError, ScenarioError, raise_faults
+from restore.files.toml import TomlDocument, read_toml
+from restore.findings import Finding, did_you_mean
+from restore.motion.ages import parse_ages
+
+Age = Annotated[float, Field(ge=0.0, allow_inf_nan=False, strict=True)]
+
+
+class _Part(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class HistoryPart(_Part):
+    """Which history."""
+
+    file: StrictStr
+
+
+class FramePart(_Part):
+    """What positions are given in."""
+
+    name: StrictStr
+    kind: Literal["plate", "mantle", "spin-axis"]
+
+
+class ConventionsPart(_Part):
+    """What numbers mean; these are the defaults."""
+
+    latitudes: Literal["as-given", "geodetic"] = "as-given"
+    radius_km: Annotated[float, Field(gt=0.0, allow_inf_nan=False)] = 6371.0088
+    beyond: Literal["refuse", "hold", "extend"] = "refuse"
+
+
+class TablePart(_Part):
+    """How a table of a task is written."""
+
+    delimiter: StrictStr = ","
+    decimal: Literal[".", ","] = "."
+    comment: StrictStr = ""
+    header: StrictBool = True
+    encoding: StrictStr = "utf-8-sig"
+    columns: dict[StrictStr, StrictStr | int] = Field(default_factory=dict)
+
+
+class _Task(_Part):
+    name: Annotated[StrictStr, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]*$")]
+    file: StrictStr
+    table: TablePart = TablePart()
+
+
+class SitesTask(_Task):
+    """Sites restored to their own ages or to given ones."""
+
+    kind: Literal["sites"]
+    ages: StrictStr | Age | list[Age] = "own"
+    draws: Annotated[int, Field(ge=1, strict=True)] | None = None
+    seed: Annotated[int, Field(ge=0, strict=True)] = 1
+
+    @field_validator("ages")
+    @classmethod
+    def _ages(cls, value: Any) -> Any:
+        try:
+            parse_ages(value)
+        except InputError as exc:
+            raise ValueError(str(exc)) from None
+        return value
+
+
+class RatesTask(_Task):
+    """Rates of a plate relative to another at points."""
+
+    kind: Literal["rates"]
+    plate: StrictStr
+    relative_to: StrictStr
+    age_ma: Age = 0.0
+    at_on: Literal["plate", "relative-to"] = "plate"
+
+
+TASKS: dict[str, type[_Task]] = {"sites": SitesTask, "rates": RatesTask}
+
+
+class _Root(_Part):
+    version: Literal[1]
+    title: StrictStr = ""
+    history: HistoryPart
+    frame: FramePart
+    conventions: ConventionsPart = ConventionsPart()
+    task: list[dict[str, Any]] = Field(min_length=1)
+
+
+@dataclass(frozen=True)
+class Scenario:
+    """A checked scenario. Files are named relative to the folder of the scenario."""
+
+    document: TomlDocument
+    root: _Root
+    tasks: tuple[SitesTask | RatesTask, ...]
+
+    @property
+    def folder(self) -> Path:
+        """The folder that file names are relative to."""
+        return Path(self.document.file).parent
+
+    def path(self, name: str) -> str:
+        """A file of the scenario as a path."""
+        return os.fspath(self.folder / name)
+
+    @property
+    def history_file(self) -> str:
+        """The history's path."""
+        return self.path(self.root.history.file)
+
+
+def read_scenario(path: str | os.PathLike[str]) -> Scenario:
+    """Read and check a scenario file.
+
+    Raises ScenarioError with one line per fault (file:line:column, what is wrong, what would be
+    right), all faults at once, missing files among them.
+    """
+    document = read_toml(path, ScenarioError)
+    findings: list[Finding] = []
+    root = _validated(_Root, document.values, (), document, findings)
+    tasks = [_task(document, i, values, findings) for i, values in enumerate(_task_values(document))]
+    _check_names(document, tasks, findings)
+    _check_files(document, findings)
+    raise_faults(ScenarioError, findings)
+    assert root is not None
+    return Scenario(document, root, tuple(task for task in tasks if task is not None))  # type: ignore[misc]
+
+
+def _task_values(document: TomlDocument) -> list[Any]:
+    tasks = document.values.get("task")
+    return tasks if isinstance(tasks, list) else []
+
+
+def _fault(document: TomlDocument, path: tuple[str | int, ...], what: str, remedy: str) -> Finding:
+    return Finding("error", "scenario", document.place(*path), what, remedy=remedy)
+
+
+def _task(document: TomlDocument, index: int, values: Any, findings: list[Finding]) -> _Task | None:
+    path: tuple[str | int, ...] = ("task", index)
+    if not isinstance(values, dict):
+        findings.append(_fault(document, path, "a task is not a table", "write [[task]]"))
+        return None
+    kind = values.get("kind")
+    if kind not in TASKS:
+        what = "the task has no kind" if kind is None else f"kind = {kind!r}"
+        remedy = did_you_mean(str(kind), TASKS) or "must be one of " + ", ".join(TASKS)
+        findings.append(_fault(document, (*path, "kind"), what, remedy))
+        return None
+    task: _Task | None = _validated(TASKS[kind], values, path, document, findings)
+    return task
+
+
+def _validated(
+    model: type[Any],
+    values: dict[str, Any],
+    path: tuple[str | int, ...],
+    document: TomlDocument,
+    findings: list[Finding],
+) -> Any:
+    try:
+        return model.model_validate(values)
+    except ValidationError as exc:
+        before = len(findings)
+        for error in exc.errors(include_url=False):
+            finding = _finding(model, error, path, document)
+            if finding not in findings[before:]:
+                findings.append(finding)
+        return None
+
+
+def _finding(
+    model: type[BaseModel], error: Any, path: tuple[str | int, ...], document: TomlDocument
+) -> Finding:
+    """A fault of pydantic's in our words."""
+    where = tuple(part for part in error["loc"] if not _is_choice(part))
+    key = str(where[-1]) if where else ""
+    if error["type"] == "extra_forbidden":
+        known = _fields(model, where[:-1])
+        return _fault(document, (*path, *where), f"unknown key {key!r}", did_you_mean(key, known))
+    if error["type"] == "missing":
+        close = did_you_mean(key, [])
+        return _fault(document, (*path, *where), f"the key {key!r} is missing", close)
+    what = f"{'.'.join(str(part) for part in where)} = {error['input']!r}"
+    remedy = error["msg"].removeprefix("Value error, ").replace("Input should be", "must be")
+    if error["type"] == "literal_error":
+        remedy = "must be " + error["ctx"]["expected"]
+        close = did_you_mean(str(error["input"]), error["ctx"]["expected"].replace("'", "").split(" or "))
+        remedy += f"; {close}" if close.startswith("did") else ""
+    if error["type"] == "string_pattern_mismatch":
+        remedy = "a task's name is the name of its file: letters, digits, - and _"
+    return _fault(document, (*path, *where), what, remedy[:1].lower() + remedy[1:])
+
+
+def _is_choice(part: str | int) -> bool:
+    """Whether a part of pydantic's location names a member of a union and no key of the file."""
+    text = str(part)
+    return "[" in text or text in {"str", "int", "float", "constrained-float"}
+
+
+def _fields(model: type[BaseModel], where: tuple[str | int, ...]) -> list[str]:
+    for part in where:
+        field = model.model_fields.get(str(part))
+        annotation = None if field is None else field.annotation
+        if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+            model = annotation
+    return list(model.model_fields)
+
+
+def _check_names(document: TomlDocument, tasks: list[_Task | None], findings: list[Finding]) -> None:
+    seen: dict[str, int] = {}
+    for index, task in enumerate(tasks):
+        if task is None:
+            continue
+        if task.name.lower() in seen:
+            first = document.place("task", seen[task.name.lower()], "name")
+            what, remedy = f"name = {task.name!r} stands twice", f"the first is on line {first.line}"
+            findings.append(_fault(document, ("task", index, "name"), what, remedy))
+        seen.setdefault(task.name.lower(), index)
+
+
+def _check_files(document: TomlDocument, findings: list[Finding]) -> None:
+    """Files that the scenario names and that are not there."""
+    folder = Path(document.file).parent
+    values = document.values
+    named: list[tuple[tuple[str | int, ...], Any]] = []
+    if isinstance(values.get("history"), dict):
+        named.append((("history", "file"), values["history"].get("file")))
+    for index, task in enumerate(_task_values(document)):
+        if isinstance(task, dict):
+            named.append((("task", index, "file"), task.get("file")))
+    for path, name in named:
+        if not isinstance(name, str) or (folder / name).is_file():
+            continue
+        reason = "is a folder" if (folder / name).is_dir() else "no such file"
+        beside = [p.name for p in folder.iterdir() if p.is_file()] if folder.is_dir() else []
+        hint = did_you_mean(name, beside)
+        remedy = hint if hint.startswith("did") else f"names are relative to {folder or '.'}"
+        findings.append(_fault(document, path, f"file = {name!r}: {reason}", remedy))
