@@ -7,11 +7,10 @@ import json
 from pathlib import Path
 
 import numpy as np
-from scipy.spatial.transform import Rotation
-
 from demo_motions import FRAME, OPENING_SINCE_MA, PAIR, PARTNER_CHANGE_MA, History, Row
 from demo_outlines import Outlines
 from demo_sphere import EARTH_RADIUS_KM, Array, inside_ring, ring_area, to_xyz
+from scipy.spatial.transform import Rotation
 
 Parts = dict[str, list[Array]]
 
@@ -83,17 +82,12 @@ def check_covariances(folder: Path) -> str:
         require(values[0] > 0, "a covariance is not positive definite")
         sizes.append(np.sqrt(values) * EARTH_RADIUS_KM)
     require(np.min(sizes) >= 2.0 and np.max(sizes) <= 25.0, "sizes outside 2..25 km")
-    return (
-        f"{len(sizes)} covariances, {np.min(sizes):.1f}..{np.max(sizes):.1f} km; {bare} rows bare"
-    )
+    return f"{len(sizes)} covariances, {np.min(sizes):.1f}..{np.max(sizes):.1f} km; {bare} rows bare"
 
 
 def check_tiling(parts: Parts) -> str:
     """Check that the rings are anticlockwise and cover the sphere once."""
-    areas = {
-        plate: [ring_area(ring[:, 1], ring[:, 0]) for ring in rings]
-        for plate, rings in parts.items()
-    }
+    areas = {plate: [ring_area(ring[:, 1], ring[:, 0]) for ring in rings] for plate, rings in parts.items()}
     require(min(min(values) for values in areas.values()) > 0, "a ring is clockwise")
     excess = sum(sum(values) for values in areas.values()) / (4 * np.pi) - 1
     require(abs(excess) < 1e-9, f"areas differ from the sphere by {excess:.2e}")

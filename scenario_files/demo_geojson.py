@@ -16,7 +16,6 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-
 from demo_sphere import Array, to_latlon, to_xyz
 
 DIGITS = 4
@@ -76,8 +75,7 @@ def cut_ring(ring: list[Place]) -> list[list[Place]]:
         while True:
             here = border(part[-1])
             ahead = {
-                (border(piece[0]) - here) % 1080.0: number
-                for number, piece in enumerate([part, *pieces])
+                (border(piece[0]) - here) % 1080.0: number for number, piece in enumerate([part, *pieces])
             }
             way = min(ahead)
             part = part + corners_between(here, way)
@@ -107,9 +105,7 @@ def line(path: Array) -> dict[str, Any]:
     return {"type": "LineString", "coordinates": lonlat(path)}
 
 
-def write_features(
-    path: Path, features: Iterable[tuple[dict[str, Any], Mapping[str, object]]]
-) -> None:
+def write_features(path: Path, features: Iterable[tuple[dict[str, Any], Mapping[str, object]]]) -> None:
     """Write (geometry, properties) pairs, one feature on each line."""
     rows = [
         json.dumps({"type": "Feature", "properties": dict(told), "geometry": shape})

@@ -13,9 +13,8 @@ from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
-from scipy.spatial.transform import Rotation
-
 from demo_sphere import EARTH_RADIUS_KM, Array, pole_of, turn
+from scipy.spatial.transform import Rotation
 
 FRAME = "deep"
 PAIR = ("ovrath", "quemmel")
@@ -53,9 +52,7 @@ MOTIONS = (
         1.1,
         moves_until=OPENING_SINCE_MA,
     ),
-    Motion(
-        "pazzel", "ovrath", (-54.7, -22.2, 0.381), (0, 21, 45, 70, 95, 120), 2.0, surveyed=False
-    ),
+    Motion("pazzel", "ovrath", (-54.7, -22.2, 0.381), (0, 21, 45, 70, 95, 120), 2.0, surveyed=False),
     Motion("glufta", "quemmel", (8.1, 26.0, 0.149), (0, 11, 26, 43, 62, 84, 104, 120), 2.9),
     Motion("zobbet", "quemmel", (7.5, -5.2, 0.300), (0, 18, 36, 58, 81, 101, 120), 3.7),
     Motion("snivar", "glufta", (-33.8, -32.4, 0.143), (0, 12, 25, 38, 50), 4.4),

@@ -9,9 +9,8 @@ and transform offsets about their mean pole.
 from __future__ import annotations
 
 import numpy as np
-from scipy.spatial import SphericalVoronoi
-
 from demo_sphere import Array, arc_deg, densify, rounded, to_latlon, to_xyz
+from scipy.spatial import SphericalVoronoi
 
 CELLS = 300
 STEP_DEG = 2.0
@@ -41,10 +40,7 @@ def own_cells(centres: Array, regions: list[list[int]], rng: np.random.Generator
     """Give each cell to the plate of the nearest seed, with noise, in one piece."""
     labels = list(SEEDS)
     distance = np.stack(
-        [
-            np.min([arc_deg(centres, to_xyz(*seed)) for seed in seeds], axis=0)
-            for seeds in SEEDS.values()
-        ]
+        [np.min([arc_deg(centres, to_xyz(*seed)) for seed in seeds], axis=0) for seeds in SEEDS.values()]
     )
     owner = np.argmin(distance + rng.normal(0, 3.0, distance.shape), axis=0)
     neighbours = cell_neighbours(regions)
@@ -112,9 +108,7 @@ def dissolve(regions: list[list[int]], owners: list[str]) -> dict[str, list[int]
 def shared_path(ring: list[int], other: list[int]) -> list[int]:
     """Return the vertices that two rings share, in the order of the first ring."""
     common = set(other)
-    start = next(
-        i for i, vertex in enumerate(ring) if vertex in common and ring[i - 1] not in common
-    )
+    start = next(i for i, vertex in enumerate(ring) if vertex in common and ring[i - 1] not in common)
     turned = ring[start:] + ring[:start]
     count = next((i for i, v in enumerate(turned) if v not in common), len(turned))
     if common & set(turned[count:]):

@@ -8,12 +8,11 @@ from itertools import pairwise
 
 import numpy as np
 import xarray as xr
-from scipy.spatial import cKDTree
-from scipy.spatial.transform import Rotation
-
 from demo_motions import OPENING_SINCE_MA, PAIR, History
 from demo_outlines import Outlines
 from demo_sphere import Array, arc_deg, densify, to_latlon, to_xyz
+from scipy.spatial import cKDTree
+from scipy.spatial.transform import Rotation
 
 OLDEST_MA = {"ibbun": 96.0, "wirrum": 112.0}
 HISTORY_MA = 120.0
@@ -201,9 +200,7 @@ def draw_cores(outlines: Outlines, crust: CrustAges, count: int, seed: int) -> l
     return [*cores, *SPECIAL]
 
 
-def date_core(
-    place: Array, plate: str, crust: CrustAges, number: int, rng: np.random.Generator
-) -> Core:
+def date_core(place: Array, plate: str, crust: CrustAges, number: int, rng: np.random.Generator) -> Core:
     """Return a site with an age that its crust and its plate allow."""
     lat, lon = (round(float(value), 4) for value in to_latlon(place))
     limit, host = min(118.0, OLDEST_MA.get(plate, HISTORY_MA)), None

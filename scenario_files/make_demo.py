@@ -37,7 +37,6 @@ from __future__ import annotations
 from pathlib import Path
 
 import numpy as np
-
 from demo_checks import check_all, owners, read_outlines
 from demo_geojson import line, polygon, write_features
 from demo_motions import (

@@ -20,6 +20,7 @@ COMMANDS = {
     "pole": ("poles", "The rotation of a plate from today to an age."),
     "stage": ("poles", "The motion of a plate from an older to a younger age."),
     "compare": ("poles", "Whether two histories differ, by how much and how surely."),
+    "separation": ("separations", "How far apart two sites stood, and in which direction."),
     "draws": ("draws", "Histories drawn from the errors of the rows."),
 }
 

@@ -58,11 +58,9 @@ class SiteJob:
 
     @property
     def with_errors(self) -> bool:
-        """Whether any row that turns has a known error."""
-        rows = self.circuit.history.rows
-        return bool(np.any(np.any(rows.covariance != 0.0, axis=(1, 2)) & ~np.isnan(rows.dof))) and bool(
-            np.any(self.circuit.history.row_errors().known[rows.age_ma > 0.0])
-        )
+        """Whether the error of any row that turns is known."""
+        history = self.circuit.history
+        return bool(np.any(history.row_errors().known & (history.rows.age_ma > 0.0)))
 
 
 @dataclass(eq=False)
