@@ -100,7 +100,9 @@ class Table:
     `rank`: where two chains differ, the pair of the lowest rank is used. `from_present`: pairs hold
     down to 0 Ma without a row of age 0. `join_within_myr`: gaps up to this length between two pairs
     of a plate are bridged with the younger pair's last stage. `rates_hold_to_ma`: to what age an
-    angular velocity is taken to hold.
+    angular velocity is taken to hold. `valid_from_ma`, `valid_to_ma`: the ages for which its pairs are
+    meant; outside they do not hold. `time_scale`: the clock of its ages. `plates`, `chrons`: labels
+    as printed -> as meant; a paper's own anomaly names need a stated pick, such as "6y" -> "C6n(y)".
     """
 
     file: str = ""
@@ -111,12 +113,20 @@ class Table:
     from_present: bool = False
     join_within_myr: float = 0.0
     rates_hold_to_ma: float = 1.0
+    valid_from_ma: float = 0.0
+    valid_to_ma: float = math.inf
+    time_scale: str = ""
     layout: Layout = field(default_factory=lambda: Layout(comment="#"))
     plates: tuple[tuple[str, str], ...] = ()
+    chrons: tuple[tuple[str, str], ...] = ()
 
     def label(self, printed: str) -> str:
         """The plate label of this history for one printed in the table."""
         return dict(self.plates).get(printed, printed)
+
+    def chron(self, printed: str) -> str:
+        """The chron that a printed one is picked as."""
+        return dict(self.chrons).get(printed, printed)
 
 
 def published_covariance(entries: list[float], kappa: float, factor: float) -> Floats:

@@ -40,12 +40,13 @@ class Pair:
     ages: Floats
     rows: Ints
     join_within_myr: float
+    held_from_ma: float
     held_to_ma: float
 
     @property
     def youngest_ma(self) -> float:
-        """Age of the youngest row, 0 where the pair is known from the present."""
-        return float(self.ages[0])
+        """Age from which the pair holds: its youngest row, 0 where it is known from the present."""
+        return self.held_from_ma
 
     @property
     def oldest_ma(self) -> float:
@@ -69,7 +70,10 @@ def pairs_of(history: History) -> list[Pair]:
         ages = np.array([0.0 if n < 0 else rows.age_ma[n] for n in order])
         join = max(table.join_within_myr for table in tables)
         numbers_ = np.array(order, dtype=np.int64)
-        pairs.append(Pair(plate, relative_to, rank, ages, numbers_, join, float(ages[-1])))
+        start = max(float(ages[0]), *(table.valid_from_ma for table in tables))
+        end = min(float(ages[-1]), *(table.valid_to_ma for table in tables))
+        if start <= end:
+            pairs.append(Pair(plate, relative_to, rank, ages, numbers_, join, start, end))
     return pairs
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Mapping
 from pathlib import Path
@@ -12,6 +13,7 @@ from restore.files.delimited import Layout
 from restore.files.toml import TomlDocument, read_toml
 from restore.findings import Finding, did_you_mean
 from restore.history.conventions import CHOICES, Conventions, Table
+from restore.history.timescale import SOURCES
 
 FRAME_KINDS = ("plate", "mantle", "spin-axis")
 KEYS: dict[str, type | tuple[type, ...]] = {"version": int, "title": str, "frames": dict, "table": list}
@@ -35,6 +37,10 @@ TABLE_KEYS: dict[str, type | tuple[type, ...]] = {
     "from_present": bool,
     "join_within_myr": (int, float),
     "rates_hold_to_ma": (int, float),
+    "valid_from_ma": (int, float),
+    "valid_to_ma": (int, float),
+    "time_scale": str,
+    "chrons": dict,
 }
 
 
@@ -109,7 +115,7 @@ def _table(document: TomlDocument, index: int, values: object, findings: list[Fi
     _check_keys(document, values, TABLE_KEYS, path, findings)
     if "file" not in values:
         findings.append(_fault(document, "the table names no file", "add file = '...'", *path))
-    for key in ("join_within_myr", "rates_hold_to_ma"):
+    for key in ("join_within_myr", "rates_hold_to_ma", "valid_from_ma", "valid_to_ma"):
         value = values.get(key, 1)
         if isinstance(value, (int, float)) and value < 0:
             findings.append(_fault(document, f"{key} = {value}", "must not be negative", *path, key))
@@ -125,6 +131,9 @@ def _table(document: TomlDocument, index: int, values: object, findings: list[Fi
     except InputError as exc:
         findings.append(_fault(document, str(exc), "", *path))
         return None
+    time_scale = _time_scale(document, values.get("time_scale", ""), path, findings)
+    if time_scale is None:
+        return None
     return Table(
         file=os.fspath(Path(document.file).parent / values["file"]),
         title=values.get("title", ""),
@@ -135,5 +144,23 @@ def _table(document: TomlDocument, index: int, values: object, findings: list[Fi
         join_within_myr=float(values.get("join_within_myr", 0.0)),
         rates_hold_to_ma=float(values.get("rates_hold_to_ma", 1.0)),
         layout=layout,
+        valid_from_ma=float(values.get("valid_from_ma", 0.0)),
+        valid_to_ma=float(values.get("valid_to_ma", math.inf)),
+        time_scale=time_scale,
         plates=tuple((str(k), str(v)) for k, v in values.get("plates", {}).items()),
+        chrons=tuple((str(k), str(v)) for k, v in values.get("chrons", {}).items()),
     )
+
+
+def _time_scale(
+    document: TomlDocument, name: str, path: tuple[str | int, ...], findings: list[Finding]
+) -> str | None:
+    """The name of a published scale, or the path of a table beside the manifest."""
+    if not name or name in SOURCES:
+        return name
+    beside = Path(document.file).parent / name
+    if beside.is_file():
+        return os.fspath(beside)
+    what = f"time_scale = {name!r} is neither a known scale nor a file beside the manifest"
+    findings.append(_fault(document, what, did_you_mean(name, SOURCES), *path, "time_scale"))
+    return None

@@ -8,7 +8,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from restore.errors import TableError
+from restore.errors import InputError, TableError
 from restore.files.delimited import Chunk, DelimitedReader, parse_number
 from restore.findings import Finding, Place, did_you_mean
 from restore.geometry.rotations import Rotations
@@ -20,6 +20,7 @@ from restore.history.conventions import (
     published_covariance,
 )
 from restore.history.rows import Row
+from restore.history.timescale import Chron, TimeScale
 
 PUBLISHED = ("cov_a", "cov_b", "cov_c", "cov_d", "cov_e", "cov_f")
 ELLIPSE = (
@@ -30,6 +31,7 @@ ELLIPSE = (
 )
 NUMBERS = (
     *("age_ma", "pole_lat_deg", "pole_lon_deg", "angle_deg", "rate_deg_per_myr"),
+    "chron_fraction",
     *("kappa", "dof", *PUBLISHED, "cov_factor", *ELLIPSE),
     *(f"omega_{axis}{unit}" for unit in RADIANS_PER_MYR for axis in "xyz"),
 )
@@ -61,6 +63,7 @@ class _TableReading:
         self.number = number
         self.findings: list[Finding] = []
         self.columns = self._find_columns()
+        self.scale = TimeScale.read(table.time_scale) if table.time_scale else None
         self.omega_unit = self._omega_unit()
 
     def _find_columns(self) -> dict[str, int]:
@@ -95,7 +98,7 @@ class _TableReading:
         if not units:
             for name in ("pole_lat_deg", "pole_lon_deg"):
                 self.reader.column(name)
-        if has_angle and "age_ma" not in self.columns:
+        if has_angle and "age_ma" not in self.columns and not self.scale:
             if "chron" in self.columns:
                 place = f"{self.reader.file}:{self.reader.header_line}"
                 raise TableError(f"{place}: chrons stand instead of ages, and no time scale is named")
@@ -160,7 +163,7 @@ class _TableReading:
             pole_lon_deg=math.nan,
             angle_deg=0.0,
             dof=numbers.get("dof", math.inf),
-            chron=self._text(chunk, at, "chron"),
+            chron=self._chron(chunk, at, numbers.get("chron_fraction", math.nan)),
             reference=self._text(chunk, at, "reference"),
             note=self._text(chunk, at, "note"),
             table=self.number,
@@ -181,7 +184,16 @@ class _TableReading:
         return rows
 
     def _shown(self) -> list[int]:
-        shown = ["plate", "relative_to", "age_ma", "pole_lat_deg", "pole_lon_deg", "angle_deg"]
+        shown = [
+            "plate",
+            "relative_to",
+            "age_ma",
+            "chron",
+            "chron_fraction",
+            "pole_lat_deg",
+            "pole_lon_deg",
+            "angle_deg",
+        ]
         shown += ["rate_deg_per_myr", *(f"omega_{axis}{self.omega_unit}" for axis in "xyz")]
         return [self.columns[name] for name in shown if name in self.columns]
 
@@ -196,14 +208,40 @@ class _TableReading:
         return replace(base, pole_lat_deg=lat, pole_lon_deg=numbers["pole_lon_deg"])
 
     def _finite_row(self, base: Row, numbers: Mapping[str, float]) -> Row:
-        for name in ("age_ma", "angle_deg"):
-            if name not in numbers:
-                raise _RowError(name, f"{name} is empty", "every row needs one")
+        if "angle_deg" not in numbers:
+            raise _RowError("angle_deg", "angle_deg is empty", "every row needs one")
+        if "age_ma" not in numbers:
+            numbers = {**numbers, "age_ma": self._age_of_chron(base.chron)}
         row = replace(base, age_ma=numbers["age_ma"])
         if numbers["angle_deg"] == 0.0:
             return row
         angle = self.table.conventions.angle_as_meant(numbers["angle_deg"])
         return replace(self._pole(row, numbers), angle_deg=angle)
+
+    def _age_of_chron(self, chron: str) -> float:
+        if not chron:
+            raise _RowError("age_ma", "age_ma is empty", "every row needs an age or a chron")
+        if self.scale is None:
+            raise _RowError(
+                "age_ma", f"age_ma is empty and chron {chron} has no clock", "name a time_scale"
+            )
+        try:
+            return self.scale.age_of(Chron.parse(chron))
+        except InputError as exc:
+            raise _RowError("chron", str(exc), "pick one in [table.chrons]") from None
+
+    def _chron(self, chunk: Chunk, at: int, fraction: float) -> str:
+        """The chron as meant, `name(edge)`; one that is only a remark stays as it is."""
+        printed = self._text(chunk, at, "chron")
+        chron = self.table.chron(printed)
+        if not chron or (self.scale is None and math.isnan(fraction)):
+            return chron
+        try:
+            return str(Chron.parse(chron, fraction))
+        except InputError as exc:
+            if self._text(chunk, at, "age_ma") and math.isnan(fraction):
+                return chron
+            raise _RowError("chron", str(exc), "or pick one in [table.chrons]") from None
 
     def _velocity_row(self, base: Row, numbers: Mapping[str, float]) -> Row:
         """The finite rotation of an angular velocity that held since `rates_hold_to_ma`."""

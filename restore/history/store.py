@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, field, fields
@@ -213,6 +214,8 @@ _ATTRIBUTES: dict[str, dict[str, str]] = {
 def _table_record(table: Table) -> dict[str, Any]:
     record = asdict(table)
     record["layout"]["columns"] = dict(table.layout.columns)
+    # JSON has no infinity
+    record["valid_to_ma"] = None if math.isinf(table.valid_to_ma) else table.valid_to_ma
     return record
 
 
@@ -220,7 +223,9 @@ def _table_from_record(record: dict[str, Any]) -> Table:
     record = dict(record)
     record["conventions"] = Conventions(**record["conventions"])
     record["layout"] = Layout(**record["layout"])
-    record["plates"] = tuple((a, b) for a, b in record["plates"])
+    record["valid_to_ma"] = math.inf if record["valid_to_ma"] is None else record["valid_to_ma"]
+    for name in ("plates", "chrons"):
+        record[name] = tuple((a, b) for a, b in record[name])
     return Table(**record)
 
 
