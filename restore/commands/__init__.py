@@ -78,10 +78,7 @@ def call(args: Sequence[str]) -> int:
     except click.exceptions.Exit as exc:
         return exc.exit_code
     except click.ClickException as exc:
-        _complain(exc.format_message())
-        if isinstance(exc, click.UsageError) and exc.ctx is not None:
-            click.echo(f"usage: {exc.ctx.command_path} --help", err=True)
-        return exc.exit_code
+        return _misused(exc)
     except BrokenPipeError:
         # the reader of a pipe has seen enough; the interpreter must not complain on its way out
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
@@ -99,6 +96,16 @@ def call(args: Sequence[str]) -> int:
             raise
         _complain(f"internal fault ({type(exc).__name__}: {exc}); --debug shows where")
         return 1
+
+
+def _misused(exc: click.ClickException) -> int:
+    if isinstance(exc, click.exceptions.NoArgsIsHelpError):
+        click.echo(exc.format_message(), err=True)
+        return exc.exit_code
+    _complain(exc.format_message())
+    if isinstance(exc, click.UsageError) and exc.ctx is not None:
+        click.echo(f"usage: {exc.ctx.command_path} --help", err=True)
+    return exc.exit_code
 
 
 def _complain(message: str) -> None:

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from restore.commands.options import debug_option, print_json
+from restore.commands.options import counted, debug_option, print_json
 from restore.errors import OncewhereError
 
 if TYPE_CHECKING:
@@ -36,7 +36,7 @@ def check(file: str, as_json: bool) -> int:
 
 def _summary(findings: list[Finding]) -> str:
     counts = {s: sum(f.severity == s for f in findings) for s in ("error", "warning", "note")}
-    return ", ".join(f"{number} {severity}s" for severity, number in counts.items())
+    return ", ".join(counted(number, severity) for severity, number in counts.items())
 
 
 def _findings(file: str) -> list[Finding]:
@@ -46,9 +46,12 @@ def _findings(file: str) -> list[Finding]:
 
     try:
         if Path(file).suffix.lower() == ".toml" and _is_scenario(file):
+            from restore.scenario.run import label_faults
             from restore.scenario.schema import read_scenario
 
-            return audit(History.read(read_scenario(file).history_file))
+            scenario = read_scenario(file)
+            history = History.read(scenario.history_file)
+            return label_faults(scenario, history) or audit(history, scenario.root.frame.name)
         return audit(History.read(file))
     except OncewhereError as exc:
         if exc.findings:

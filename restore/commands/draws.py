@@ -32,8 +32,11 @@ def draws(history_file: str, count: int, seed: int, out: str) -> None:
         raise InputError(f"{out}: is there already; name a new folder")
     remark = undrawn(history)
     say_findings([remark] if remark else [])
-    folder.mkdir(parents=True)
+    try:
+        folder.mkdir(parents=True)
+    except OSError as exc:
+        raise InputError(f"{out}: cannot be made: {exc.strerror}") from None
     width = max(3, len(str(count)))
     for number, rows in enumerate(drawn_rotations(history, count, seed), start=1):
         drawn_history(history, rows, number).write(folder / f"draw-{number:0{width}d}.nc")
-    click.echo(f"{count} histories in {out}", err=True)
+    click.echo(f"{count} {'history' if count == 1 else 'histories'} in {out}", err=True)

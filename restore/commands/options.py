@@ -145,14 +145,17 @@ def make_layout(
             raise click.BadParameter(f"{part!r}: write ours=theirs", param_hint="--columns")
         name = theirs.strip()
         mapping[ours.strip()] = int(name) if name.isdigit() else name
-    return Layout(
-        delimiter=delimiter,
-        comment=comment,
-        header=not no_header,
-        decimal=decimal,
-        encoding=encoding,
-        columns=mapping,
-    )
+    try:
+        return Layout(
+            delimiter=delimiter,
+            comment=comment,
+            header=not no_header,
+            decimal=decimal,
+            encoding=encoding,
+            columns=mapping,
+        )
+    except InputError as exc:
+        raise click.UsageError(str(exc)) from None
 
 
 def read_history(path: str) -> History:
@@ -210,4 +213,10 @@ def progress(path: str) -> Iterator[Callable[[int], None]]:
 def say_counts(counts: Mapping[str, int]) -> None:
     """How many rows have each status, on standard error."""
     said = ", ".join(f"{number} {status}" for status, number in sorted(counts.items()))
-    click.echo(f"{sum(counts.values())} rows: {said}" if said else "0 rows", err=True)
+    rows = counted(sum(counts.values()), "row")
+    click.echo(f"{rows}: {said}" if said else rows, err=True)
+
+
+def counted(number: int, what: str) -> str:
+    """A number of things in words: 1 row, 2 rows."""
+    return f"{number} {what}" if number == 1 else f"{number} {what}s"

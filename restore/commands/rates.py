@@ -67,6 +67,7 @@ def rates(
         raise click.UsageError("give either --history FILE or --pole LAT,LON,DEG_PER_MYR")
     if pole is None and (plate is None or relative_to is None):
         raise click.UsageError("with --history give --plate and --relative-to")
+    from restore.files.points import beside
     from restore.files.tables import TableOut
     from restore.geometry.latitudes import Latitudes
     from restore.motion.rates import rates as rates_at
@@ -93,14 +94,13 @@ def rates(
         "age_ma": age_ma,
         "at_on": at_on,
     }
-    settings |= {"pole": pole, "latitudes": latitudes, "radius_km": radius_km}
-    columns: dict[str, Any] = {**own, **found.columns()}
+    settings |= {"pole": pole, "latitudes": latitudes, "radius_km": radius_km, "beyond": beyond}
     count = len(found.lat_deg)
     said = {"plate": plate or "", "relative_to": relative_to or "", "latitudes": latitudes}
     said["errors"] = "error of rows only" if pole is None else "not known"
-    columns |= {name: [value] * count for name, value in said.items() if name not in own}
+    results = found.columns() | {name: [value] * count for name, value in said.items()}
     with TableOut(out, provenance(inputs, settings), ("then_lat_deg", "then_lon_deg")) as target:
-        target.add(columns)
+        target.add(beside(own, results))
 
 
 def _read_points(file: str, layout: Layout) -> tuple[dict[str, list[str]], list[float], list[float]]:

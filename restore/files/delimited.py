@@ -8,15 +8,17 @@ from __future__ import annotations
 
 import csv
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TextIO
 
 from restore.errors import TableError
+from restore.files.text import why_unreadable
 from restore.findings import Finding, Place, did_you_mean
 
 FIELD_LIMIT = 10_000_000
+LONGEST_SHOWN = 60
 NAMED_DELIMITERS = {"tab": "\t", "comma": ",", "semicolon": ";", "space": " ", "bar": "|"}
 
 
@@ -85,6 +87,8 @@ class _Lines:
         self.trailing = layout.trailing_comments or (
             layout.delimiter == "whitespace" and bool(layout.comment)
         )
+        self.quoted = layout.delimiter != "whitespace"
+        self.quotes = 0
         self.number = 0
         self.record_line: int | None = None
 
@@ -97,9 +101,18 @@ class _Lines:
                 if not line.strip():
                     continue
                 self.record_line = self.number
-            if self.trailing and self.comment in line:
-                line = line.split(self.comment, 1)[0].rstrip()
-            yield line
+                self.quotes = 0
+            yield self._without_comment(line) if self.trailing else line
+
+    def _without_comment(self, line: str) -> str:
+        """The line up to a comment mark that stands outside quotes."""
+        at = line.find(self.comment)
+        while at >= 0 and self.quoted and (self.quotes + line.count('"', 0, at)) % 2:
+            at = line.find(self.comment, at + 1)
+        if at >= 0:
+            line = line[:at].rstrip() + "\n"
+        self.quotes += line.count('"')
+        return line
 
 
 class DelimitedReader:
@@ -114,6 +127,7 @@ class DelimitedReader:
         self.file = os.fspath(path)
         self.layout = layout or Layout()
         self.header: list[str] = []
+        self.known: frozenset[str] = frozenset()
 
     def __enter__(self) -> DelimitedReader:
         self._stream = self._open()
@@ -131,8 +145,6 @@ class DelimitedReader:
         self._stream.close()
 
     def _open(self) -> TextIO:
-        if self.path.is_dir():
-            raise TableError(f"{self.file}: is a folder, not a file")
         try:
             with self.path.open("rb") as raw:
                 start = raw.read(4096)
@@ -140,17 +152,16 @@ class DelimitedReader:
             if start[:2] in (b"\xff\xfe", b"\xfe\xff") and encoding == "utf-8-sig":
                 encoding = "utf-16"
             elif b"\x00" in start:
-                raise TableError(f"{self.file}: holds zero bytes: not a text table")
+                line = start.count(b"\n", 0, start.index(b"\x00")) + 1
+                raise TableError(f"{self.file}:{line}: holds zero bytes: not a text table")
             self.encoding = encoding
             return self.path.open(encoding=encoding, newline="")
-        except FileNotFoundError:
-            raise TableError(f"{self.file}: no such file") from None
         except LookupError:
             raise TableError(
                 f"{self.file}: encoding {self.layout.encoding!r} is not known; for example utf-8, latin-1"
             ) from None
         except OSError as exc:
-            raise TableError(f"{self.file}: cannot be read: {exc.strerror}") from None
+            raise TableError(f"{self.file}: {why_unreadable(exc)}") from None
 
     def _split(self, lines: _Lines) -> Iterator[list[str]]:
         if self.layout.delimiter == "whitespace":
@@ -166,16 +177,27 @@ class DelimitedReader:
             return None
         except csv.Error as exc:
             line = self._lines.record_line or self._lines.number
-            reason = "a quote that opens here is never closed" if "end of data" in str(exc) else exc
+            reason = "a quote that opens here is never closed"
+            if "end of data" not in str(exc):
+                reason = f"{exc}; a quote inside a quoted text is written twice"
             raise TableError(f"{self.file}:{line}: {reason}") from None
         except UnicodeDecodeError as exc:
-            byte = exc.object[exc.start]
+            line, byte = self._undecodable(exc)
             raise TableError(
-                f"{self.file}:{self._lines.number + 1}: byte 0x{byte:02x} (on or after this line) is"
-                f" not {self.encoding.removesuffix('-sig')} text; save the file as UTF-8 or state its"
-                " encoding"
+                f"{self.file}:{line}: byte 0x{byte:02x} is not {self.encoding.removesuffix('-sig')} text;"
+                " save the file as UTF-8 or state its encoding"
             ) from None
         return self._lines.record_line or self._lines.number, record
+
+    def _undecodable(self, found: UnicodeDecodeError) -> tuple[int, int]:
+        """The line and the byte that cannot be decoded; text is decoded far ahead of the rows."""
+        with self.path.open("rb") as raw:
+            for line, data in enumerate(raw, start=1):
+                try:
+                    data.decode(self.encoding)
+                except UnicodeDecodeError as exc:
+                    return line, data[exc.start]
+        return self._lines.number + 1, found.object[found.start]
 
     def _read_header(self) -> None:
         if self._first is None:
@@ -199,6 +221,14 @@ class DelimitedReader:
     def bytes_read(self) -> int:
         """How far into the file the reading has come, for a progress bar."""
         return self._stream.buffer.tell() if hasattr(self._stream, "buffer") else 0
+
+    def expect(self, known: Iterable[str]) -> None:
+        """Say which columns have a meaning; raises TableError if the column map names another."""
+        self.known = frozenset(known)
+        for name in self.layout.columns:
+            if name not in self.known:
+                hint = did_you_mean(name, self.known) or "known: " + ", ".join(sorted(self.known))
+                raise TableError(f"{self.file}: column map: {name!r} is not a column that is read; {hint}")
 
     def column(self, ours: str, required: bool = True) -> int | None:
         """The place (from 0) of one of our columns, through the layout's column map.
@@ -226,13 +256,19 @@ class DelimitedReader:
         if len(self.header) == 1:
             for mark, name in ((";", "semicolon"), ("\t", "tab"), ("|", "bar"), (" ", "whitespace")):
                 if mark in self.header[0]:
+                    shown = self.header[0][:LONGEST_SHOWN]
+                    shown += "..." if shown != self.header[0] else ""
                     return (
-                        f"the header is one column, {self.header[0]!r}: the table looks"
-                        f" {name}-delimited; state delimiter = {name!r}"
+                        f"the header is one column, {shown!r}: the table looks {name}-delimited;"
+                        f" state delimiter = {name!r} (an option of the command, or a key of the manifest"
+                        " or scenario)"
                     )
         wanted = f"column {theirs!r}" + (f" (for {ours})" if theirs != ours else "")
-        hint = did_you_mean(theirs, [name for name in self.header if name])
-        return f"{wanted} is missing; " + (hint or "the header is " + ", ".join(self.header))
+        # a column that has a meaning of its own is no misspelling of another
+        hint = did_you_mean(theirs, [name for name in self.header if name and name not in self.known])
+        if not hint.startswith("did"):
+            hint = "the header is " + ", ".join(self.header)
+        return f"{wanted} is missing; {hint}"
 
     def chunks(self, size: int = 50_000) -> Iterator[Chunk]:
         """The rows in chunks of at most `size`; a table without rows gives one empty chunk."""

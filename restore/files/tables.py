@@ -20,7 +20,7 @@ from typing import TYPE_CHECKING, Any, TextIO
 import numpy as np
 
 from restore.errors import InputError, MissingPackageError
-from restore.files.atomic import whole_file
+from restore.files.atomic import check_target, refuse_input, whole_file
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -89,6 +89,9 @@ class TableOut:
         self.path = None if path is None else Path(path)
         self.ending = ".csv" if path is None else check_ending(path)
         self.provenance = dict(provenance)
+        if path is not None:
+            check_target(path)
+            refuse_input(path, (record["file"] for record in self.provenance.get("inputs", ())))
         self.geometry = geometry
         self.pieces: list[dict[str, Any]] = []
         self._stack = contextlib.ExitStack()

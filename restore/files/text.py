@@ -8,6 +8,15 @@ from pathlib import Path
 from restore.errors import InputError
 
 
+def why_unreadable(exc: OSError) -> str:
+    """Why a file could not be read, in plain words."""
+    if isinstance(exc, FileNotFoundError):
+        return "no such file"
+    if isinstance(exc, IsADirectoryError):
+        return "is a folder, not a file"
+    return f"cannot be read: {exc.strerror or exc}"
+
+
 def read_text(
     path: str | os.PathLike[str], kind: type[InputError] = InputError, encoding: str = "utf-8-sig"
 ) -> str:
@@ -18,12 +27,8 @@ def read_text(
     name = os.fspath(path)
     try:
         data = Path(path).read_bytes()
-    except FileNotFoundError:
-        raise kind(f"{name}: no such file") from None
-    except IsADirectoryError:
-        raise kind(f"{name}: is a folder, not a file") from None
     except OSError as exc:
-        raise kind(f"{name}: cannot be read: {exc.strerror}") from None
+        raise kind(f"{name}: {why_unreadable(exc)}") from None
     if data[:2] in (b"\xff\xfe", b"\xfe\xff") and encoding == "utf-8-sig":
         encoding = "utf-16"
     try:

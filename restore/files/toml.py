@@ -14,7 +14,9 @@ from restore.files.text import read_text
 from restore.findings import Place
 
 _KEY = re.compile(r"""\s*(?:"((?:[^"\\]|\\.)*)"|'([^']*)'|([A-Za-z0-9_-]+))\s*""")
-_STRING = re.compile(r'"""(?:[^\\]|\\.)*?"""|\'\'\'.*?\'\'\'|"(?:[^"\\\n]|\\.)*"|\'[^\'\n]*\'', re.DOTALL)
+_STRING = re.compile(
+    r'"""(?:[^\\]|\\.)*?"{3,5}|\'\'\'.*?\'{3,5}|"(?:[^"\\\n]|\\.)*"|\'[^\'\n]*\'', re.DOTALL
+)
 
 
 @dataclass(frozen=True)
@@ -111,7 +113,10 @@ class _KeyScanner:
         while True:
             found = _KEY.match(self.text, self.at)
             assert found is not None
-            keys.append(next(group for group in found.groups() if group is not None))
+            basic, literal, bare = found.groups()
+            if basic is not None:
+                basic = tomllib.loads(f'key = "{basic}"')["key"]
+            keys.append(next(group for group in (basic, literal, bare) if group is not None))
             self.at = found.end()
             if not self.text.startswith(".", self.at):
                 return tuple(keys)

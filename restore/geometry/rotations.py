@@ -62,17 +62,24 @@ class Rotations:
         q = np.asarray(wxyz, dtype=np.float64)
         if q.ndim == 0 or q.shape[-1] != 4:
             raise ValueError(f"quaternions have shape {q.shape}: the last axis must have length 4")
-        size = np.sqrt(np.sum(q * q, axis=-1))
+        size = np.max(np.abs(q), axis=-1)
         bad = ~(np.isfinite(size) & (size > 0.0))
         if np.any(bad):
             where = tuple(int(i) for i in np.argwhere(bad)[0])
             raise ValueError(f"quaternion {where} is {q[where]}: its length must be finite, above 0")
-        return cls(so3.normalise(q))
+        # scaled first, so that squares neither overflow nor vanish
+        return cls(so3.normalise(q / size[..., np.newaxis]))
 
     @classmethod
     def from_vectors(cls, vectors: ArrayLike) -> Rotations:
-        """From rotation vectors `(..., 3)`: axis times angle, radians."""
-        return cls(so3.exponential(vectors))
+        """From rotation vectors `(..., 3)`: axis times angle, radians.
+
+        Raises ValueError if the last axis does not have length 3.
+        """
+        v = np.asarray(vectors, dtype=np.float64)
+        if v.ndim == 0 or v.shape[-1] != 3:
+            raise ValueError(f"vectors have shape {v.shape}: the last axis must have length 3")
+        return cls(so3.exponential(v))
 
     @classmethod
     def from_matrices(cls, matrices: ArrayLike) -> Rotations:
@@ -83,13 +90,15 @@ class Rotations:
         m = np.asarray(matrices, dtype=np.float64)
         if m.shape[-2:] != (3, 3):
             raise ValueError(f"matrices have shape {m.shape}: the last two axes must be 3 by 3")
-        departure = np.abs(m @ np.swapaxes(m, -1, -2) - np.eye(3)).max(axis=(-1, -2))
-        bad = ~((departure < 1e-6) & (np.linalg.det(m) > 0.0))
+        with np.errstate(invalid="ignore", over="ignore"):
+            departure = np.abs(m @ np.swapaxes(m, -1, -2) - np.eye(3)).max(axis=(-1, -2))
+            determinant = np.linalg.det(m)
+        bad = ~((departure < 1e-6) & (determinant > 0.0))
         if np.any(bad):
             where = tuple(int(i) for i in np.argwhere(bad)[0])
             raise ValueError(
                 f"matrix {where} is not a proper rotation: M M^T differs from the identity by"
-                f" {departure[where]:.3g}, determinant {np.linalg.det(m[where]):.6g}"
+                f" {departure[where]:.3g}, determinant {determinant[where]:.6g}"
             )
         return cls(so3.from_matrices(m))
 
@@ -100,7 +109,8 @@ class Rotations:
 
     def __getitem__(self, item: Any) -> Rotations:
         """Some of the rotations, indexed as an array of `shape` would be."""
-        return Rotations(self.quaternions.reshape(*self.shape, 4)[item])
+        numbers = np.arange(int(np.prod(self.shape, dtype=np.int64))).reshape(self.shape)
+        return Rotations(self.quaternions.reshape(-1, 4)[numbers[item]])
 
     def __len__(self) -> int:
         if not self.shape:

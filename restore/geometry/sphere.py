@@ -57,9 +57,11 @@ def lat_lon(vectors: ArrayLike) -> tuple[Floats, Floats]:
     lat = np.rad2deg(np.arctan2(z, level))
     lon = np.rad2deg(np.arctan2(y, x))
     lon = np.where(lon >= 180.0, -180.0, lon)
-    nowhere = (level == 0.0) & (z == 0.0)
-    if np.any(nowhere):
-        lat, lon = np.where(nowhere, np.nan, lat), np.where(nowhere, np.nan, lon)
+    on_axis = level == 0.0
+    if np.any(on_axis):
+        nowhere = on_axis & (z == 0.0)
+        lat = np.where(nowhere, np.nan, lat)
+        lon = np.where(on_axis, np.where(nowhere, np.nan, 0.0), lon)
     return lat, lon
 
 
@@ -147,8 +149,9 @@ def azimuth_deg(start: ArrayLike, end: ArrayLike) -> Floats:
     """
     start, end = np.asarray(start, dtype=np.float64), np.asarray(end, dtype=np.float64)
     east, north = tangent_frame(start)
-    # end - start has the same tangent components as end, without the cancellation of short lines
-    step = end - start
+    # end - start has the same tangent components as end, without the cancellation of short lines;
+    # near the antipode end + start has them
+    step = np.where((dot(start, end) < 0.0)[..., np.newaxis], end + start, end - start)
     return compass_deg(dot(step, east), dot(step, north))
 
 

@@ -277,4 +277,5 @@ class CircuitRotations:
     def covariance(self, errors: RowErrors | None = None) -> Floats:
         """Covariances (n, 3, 3), rad^2, in the plate's coordinates; NaN where a row's is not known."""
         errors = self.circuit.history.row_errors() if errors is None else errors
-        return self.sensitivity().covariance(errors)
+        covariance = self.sensitivity().covariance(errors)
+        return np.where((self.status == REACHED)[:, np.newaxis, np.newaxis], covariance, np.nan)

@@ -81,14 +81,14 @@ def pairs_of(history: History) -> list[Pair]:
 class Stages:
     """Stages of all pairs, by stage number.
 
-    `start_ma`, `per_myr` (1 / length; 0 for a pair of one row), `half` (half the stage angle,
+    `start_ma`, `length_myr` (infinite for a pair of one row), `half` (half the stage angle,
     radians), `start` and `side` (4, stages): quaternions of the arc; `axis` (3, stages): unit vector
     of the stage in the plate's coordinates; `younger`, `older`: row numbers, -1 for an implied zero
     row. `first`: first stage of each pair; `ages`: each pair's row ages.
     """
 
     start_ma: Floats
-    per_myr: Floats
+    length_myr: Floats
     half: Floats
     start: Floats
     side: Floats
@@ -102,7 +102,7 @@ class Stages:
     def of(cls, rows: Floats, pairs: Sequence[Pair]) -> Stages:
         """All stages of `pairs`, computed once, from the quaternions (rows, 4) of a history's rows."""
         quaternions = np.concatenate([rows, so3.IDENTITY[None]])
-        younger, older, start_ma, per_myr, first = [], [], [], [], []
+        younger, older, start_ma, lengths, first = [], [], [], [], []
         count = 0
         for pair in pairs:
             first.append(count)
@@ -110,12 +110,12 @@ class Stages:
                 younger.append(pair.rows)
                 older.append(pair.rows)
                 start_ma.append(pair.ages)
-                per_myr.append(np.zeros(1))
+                lengths.append(np.full(1, np.inf))
             else:
                 younger.append(pair.rows[:-1])
                 older.append(pair.rows[1:])
                 start_ma.append(pair.ages[:-1])
-                per_myr.append(1.0 / np.diff(pair.ages))
+                lengths.append(np.diff(pair.ages))
             count += len(younger[-1])
         rows_younger = np.concatenate(younger) if younger else np.zeros(0, np.int64)
         rows_older = np.concatenate(older) if older else np.zeros(0, np.int64)
@@ -123,7 +123,7 @@ class Stages:
         axis = so3.multiply(so3.conjugate(between.start), between.side)[..., 1:]
         return cls(
             np.concatenate(start_ma) if start_ma else np.zeros(0),
-            np.concatenate(per_myr) if per_myr else np.zeros(0),
+            np.concatenate(lengths) if lengths else np.zeros(0),
             between.half,
             np.ascontiguousarray(between.start.T),
             np.ascontiguousarray(between.side.T),
@@ -164,7 +164,8 @@ def steps_along(stages: Stages, chain: Chain, ages: Floats, just_younger: bool =
     """
     for link in chain:
         stage = stages.find(link.pair, ages, just_younger)
-        fraction = (ages - stages.start_ma.take(stage)) * stages.per_myr.take(stage)
+        # a quotient, so that the fraction at the older row's exact age is exactly 1
+        fraction = (ages - stages.start_ma.take(stage)) / stages.length_myr.take(stage)
         turned = fraction * stages.half.take(stage)
         cos, sin = np.cos(turned), np.sin(turned)
         rotation = np.moveaxis(np.empty((4, len(ages))), 0, -1)
@@ -218,7 +219,8 @@ def pull_back(
         weights = so3.stage_weights(step.fraction, half)
         older = tuple(so3.pull_back_stage(c, axis, weights) for c in own)
         younger = tuple(c - o for c, o in zip(own, older, strict=True))
-        speed = 2.0 * half * stages.per_myr.take(step.stage)
+        myr = stages.length_myr.take(step.stage)
+        speed = np.where(np.isinf(myr), np.nan, 2.0 * half / myr)
         velocity = tuple(
             speed * (c[..., 0] * axis[..., 0] + c[..., 1] * axis[..., 1] + c[..., 2] * axis[..., 2])
             for c in own

@@ -13,6 +13,7 @@ from restore.files.delimited import Layout
 from restore.files.toml import TomlDocument, read_toml
 from restore.findings import Finding, did_you_mean
 from restore.history.conventions import CHOICES, Conventions, Table
+from restore.history.reading import KNOWN_COLUMNS
 from restore.history.timescale import SOURCES
 
 FRAME_KINDS = ("plate", "mantle", "spin-axis")
@@ -62,7 +63,7 @@ def read_manifest(path: str | os.PathLike[str]) -> Manifest:
     findings: list[Finding] = []
     _check_keys(document, document.values, KEYS, (), findings)
     values = document.values
-    if values.get("version") != 1:
+    if values.get("version", 0) != 1 and type(values.get("version", 0)) is int:
         what = f"version = {values.get('version')!r}"
         findings.append(_fault(document, what, "this release reads version = 1", "version"))
     frames = values.get("frames", {})
@@ -71,8 +72,9 @@ def read_manifest(path: str | os.PathLike[str]) -> Manifest:
             remedy = "must be one of " + ", ".join(FRAME_KINDS)
             findings.append(_fault(document, f"frame kind {kind!r}", remedy, "frames", name))
     tables = values.get("table", [])
-    if not isinstance(tables, list) or not tables:
+    if not tables:
         findings.append(_fault(document, "no [[table]] is named", "a history needs one", "table"))
+    if not isinstance(tables, list):
         tables = []
     described = [_table(document, i, table, findings) for i, table in enumerate(tables)]
     raise_faults(HistoryError, findings)
@@ -102,6 +104,9 @@ def _check_keys(
             names = {str: "a text", bool: "true or false", int: "a whole number", dict: "a table"}
             names[list] = "an array"
             wanted = "a number" if isinstance(kinds, tuple) else names[kinds]
+            if key == "table" and isinstance(value, dict):
+                findings.append(_fault(document, "[table] is one table", "write [[table]]", *path, key))
+                continue
             what = f"{key} = {value!r}"
             findings.append(_fault(document, what, f"must be {wanted}", *path, key))
 
@@ -115,14 +120,8 @@ def _table(document: TomlDocument, index: int, values: object, findings: list[Fi
     _check_keys(document, values, TABLE_KEYS, path, findings)
     if "file" not in values:
         findings.append(_fault(document, "the table names no file", "add file = '...'", *path))
-    for key in ("join_within_myr", "rates_hold_to_ma", "valid_from_ma", "valid_to_ma"):
-        value = values.get(key, 1)
-        if isinstance(value, (int, float)) and value < 0:
-            findings.append(_fault(document, f"{key} = {value}", "must not be negative", *path, key))
-    for key, allowed in CHOICES.items():
-        if isinstance(values.get(key), str) and values[key] not in allowed:
-            hint = "must be one of " + ", ".join(allowed)
-            findings.append(_fault(document, f"{key} = {values[key]!r}", hint, *path, key))
+    _check_values(document, values, path, findings)
+    _check_maps(document, values, path, findings)
     if len(findings) > before:
         return None
     try:
@@ -150,6 +149,43 @@ def _table(document: TomlDocument, index: int, values: object, findings: list[Fi
         plates=tuple((str(k), str(v)) for k, v in values.get("plates", {}).items()),
         chrons=tuple((str(k), str(v)) for k, v in values.get("chrons", {}).items()),
     )
+
+
+def _check_values(
+    document: TomlDocument, values: Mapping[str, Any], path: tuple[str | int, ...], findings: list[Finding]
+) -> None:
+    """Numbers and choices of one table."""
+    for key in ("join_within_myr", "rates_hold_to_ma", "valid_from_ma", "valid_to_ma"):
+        value = values.get(key, 1)
+        endless = key == "valid_to_ma" and value == math.inf
+        if isinstance(value, (int, float)) and not 0 <= value < math.inf and not endless:
+            rule = "must not be negative" if value < 0 else "must be finite"
+            findings.append(_fault(document, f"{key} = {value}", rule, *path, key))
+    if values.get("rates_hold_to_ma") == 0:
+        what = "rates_hold_to_ma = 0"
+        findings.append(_fault(document, what, "must be above 0", *path, "rates_hold_to_ma"))
+    for key, allowed in CHOICES.items():
+        if isinstance(values.get(key), str) and values[key] not in allowed:
+            hint = "must be one of " + ", ".join(allowed)
+            findings.append(_fault(document, f"{key} = {values[key]!r}", hint, *path, key))
+
+
+def _check_maps(
+    document: TomlDocument, values: Mapping[str, Any], path: tuple[str | int, ...], findings: list[Finding]
+) -> None:
+    """The maps of columns (to a name or a number), of plates and of chrons (to texts)."""
+    for key in ("columns", "plates", "chrons"):
+        entries = values.get(key, {})
+        for name, value in entries.items() if isinstance(entries, dict) else ():
+            place = (*path, key, name)
+            if key == "columns" and name not in KNOWN_COLUMNS:
+                what = f"{name!r} is not a column that is read"
+                findings.append(_fault(document, what, did_you_mean(name, KNOWN_COLUMNS), *place))
+            elif isinstance(value, str) or (key == "columns" and type(value) is int):
+                continue
+            else:
+                wanted = "a name or a whole number" if key == "columns" else "a text"
+                findings.append(_fault(document, f"{name} = {value!r}", f"must be {wanted}", *place))
 
 
 def _time_scale(

@@ -68,10 +68,7 @@ class _TableReading:
 
     def _find_columns(self) -> dict[str, int]:
         columns: dict[str, int] = {}
-        for name in self.table.layout.columns:
-            if name not in KNOWN_COLUMNS:
-                hint = did_you_mean(name, KNOWN_COLUMNS)
-                raise TableError(f"{self.reader.file}: column map: {name!r} is not a column; {hint}")
+        self.reader.expect(KNOWN_COLUMNS)
         for name in (*NUMBERS, *TEXTS):
             place = self.reader.column(name, required=name in {"plate", "relative_to"})
             if place is not None:
@@ -88,9 +85,9 @@ class _TableReading:
             place = f"{self.reader.file}:{self.reader.header_line}"
             if has_angle + has_rate + len(units) == 0:
                 missing = [n for n in ("age_ma", "angle_deg") if n not in self.columns]
-                close = did_you_mean("angle_deg", self.reader.header)
+                close = did_you_mean("angle_deg", set(self.reader.header) - KNOWN_COLUMNS)
                 hint = close if close.startswith("did") else "or rate_deg_per_myr, or omega_x.. with unit"
-                raise TableError(f"{place}: column {', '.join(missing)} is missing; {hint}")
+                raise TableError(f"{place}: column {' and '.join(map(repr, missing))} is missing; {hint}")
             raise TableError(
                 f"{place}: angles, rates and angular velocities stand side by side;"
                 " a table gives one of them"
@@ -136,9 +133,9 @@ class _TableReading:
             try:
                 value = parse_number(text, self.reader.layout.decimal)
             except ValueError:
-                remedy = "must be a number"
+                remedy = "numbers are written as 12.5 or 3e-7"
                 if text.strip().replace(",", "").replace("-", "").isdigit():
-                    remedy += "; state decimal = ',' if decimal commas are meant"
+                    remedy = "state decimal = ',' in a manifest if decimal commas are meant"
                 raise _RowError(name, f"{name} = {text!r} is not a number", remedy) from None
             if text.strip() and not math.isfinite(value):
                 raise _RowError(

@@ -74,11 +74,16 @@ class Row:
     def _error_faults(self) -> Iterator[tuple[str, str, str]]:
         if not self.dof > 0.0:
             yield "dof", f"dof = {self.dof:g}", "degrees of freedom are above 0"
-        if self.covariance is None or self.age_ma == 0.0 or not np.any(self.covariance):
+        if self.covariance is None:
             return
-        if not np.all(np.isfinite(self.covariance)):
+        matrix = np.asarray(self.covariance)
+        if matrix.shape != (3, 3):
+            yield "cov_a", f"the covariance has shape {matrix.shape}", "it is a 3 by 3 matrix"
+        elif not np.all(np.isfinite(matrix)):
             yield "cov_a", "the covariance is not finite", "leave it empty if it is not known"
-        elif not is_positive_definite(self.covariance):
+        elif not np.allclose(matrix, matrix.T, rtol=1e-9, atol=0.0):
+            yield "cov_a", "the covariance is not symmetric", "compare with the paper"
+        elif self.age_ma > 0.0 and np.any(matrix) and not is_positive_definite(matrix):
             low = np.linalg.eigvalsh(self.covariance)[0]
             what = f"the covariance is not positive definite (smallest eigenvalue {low:.3g} rad^2)"
             yield "cov_a", what, "compare with the paper; some are misprinted"

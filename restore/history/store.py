@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
 LAYOUT_VERSION = 1
+TEXT_COLUMNS = frozenset({"plate", "relative_to", "chron", "reference", "note", "printed"})
 NETCDF_ENDINGS = frozenset({".nc", ".nc4"})
 
 
@@ -160,7 +161,7 @@ class History:
             values = dataset[column.name].values
             if column.name in {"table", "line"}:
                 columns[column.name] = values.astype(np.int64)
-            elif values.dtype.kind in "OUST":
+            elif column.name in TEXT_COLUMNS:
                 texts = np.empty(values.shape, dtype=object)
                 texts[:] = [str(v) for v in values]
                 columns[column.name] = texts

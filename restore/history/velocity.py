@@ -21,9 +21,13 @@ from restore.history.links import Ints, Stages, Step
 
 
 def stage_velocity(stages: Stages, step: Step) -> Floats:
-    """Zeta (n, 3), rad/Myr, of one link as a pair listed it, in its plate's coordinates."""
+    """Zeta (n, 3), rad/Myr, of one link as a pair listed it, in its plate's coordinates.
+
+    NaN for a pair of one row, which says where a plate was and not how fast it went.
+    """
     axis = np.moveaxis(stages.axis.take(step.stage, axis=1), 0, -1)
-    speed = -2.0 * stages.half.take(step.stage) * stages.per_myr.take(step.stage)
+    myr = stages.length_myr.take(step.stage)
+    speed = np.where(np.isinf(myr), np.nan, -2.0 * stages.half.take(step.stage) / myr)
     velocity: Floats = axis * speed[..., np.newaxis]
     return velocity
 
@@ -111,7 +115,7 @@ def _of_stage(stages: Stages, step: Step, own: Functional) -> Iterator[tuple[Int
     younger = own.on_rotation - older
     across = np.where(half == 0.0, 1.0, half / np.tan(np.where(half == 0.0, 1.0, half)))
     one = np.ones_like(half)
-    rate = stages.per_myr.take(step.stage)[..., np.newaxis]
+    rate = 1.0 / stages.length_myr.take(step.stage)[..., np.newaxis]
     right = so3.pull_back_stage(own.on_velocity, axis, so3.StageWeights(one, across, half))
     left = so3.pull_back_stage(own.on_velocity, axis, so3.StageWeights(one, across, -half))
     yield stages.younger.take(step.stage), younger + rate * left

@@ -24,10 +24,11 @@ def parse_ages(asked: str | float | Iterable[float]) -> tuple[float, ...] | None
         if asked.strip() == "own":
             return None
         ages = _stepped(asked) if ":" in asked else _listed(asked)
-    elif isinstance(asked, Iterable):
-        ages = [float(age) for age in asked]
     else:
-        ages = [float(asked)]
+        try:
+            ages = [float(age) for age in asked] if isinstance(asked, Iterable) else [float(asked)]
+        except (TypeError, ValueError):
+            raise InputError(f"ages {asked!r}: an age is not a number; give ages in Ma") from None
     if not ages:
         raise InputError(f"ages {asked!r}: at least one age is needed")
     for age in ages:

@@ -252,10 +252,12 @@ def _add_own_errors(
 ) -> None:
     """Add the site's position error, and its age sigma times the motion per Myr."""
     if points.age_sigma is not None:
-        square = np.nan_to_num(points.age_sigma[items]) ** 2
-        total[0] += by_age[0] ** 2 * square
-        total[1] += by_age[1] ** 2 * square
-        total[2] += by_age[0] * by_age[1] * square
+        sigma = np.nan_to_num(points.age_sigma[items])
+        # the motion of a pair of one row is not known, which must not matter to a site without sigma
+        east, north = (np.where(sigma > 0.0, rate * sigma, 0.0) for rate in by_age)
+        total[0] += east * east
+        total[1] += north * north
+        total[2] += east * north
     if points.position_sigma is not None:
         square = np.nan_to_num(points.position_sigma[items]) ** 2
         total[0] += square

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 
 from restore.errors import InputError
-from restore.files.atomic import whole_file
+from restore.files.atomic import check_target, refuse_input, whole_file
 from restore.files.delimited import DelimitedReader, Layout
 from restore.files.tables import TableOut, csv_text
 from restore.findings import Finding
@@ -55,8 +55,8 @@ def restore_file(
     every link of the first 10 000 results. Raises TableError or InputError if the file as a whole
     is at fault; then nothing is written.
     """
-    if ledger_file is not None and Path(ledger_file).suffix.lower() not in {".csv", ".json"}:
-        raise InputError(f"{os.fspath(ledger_file)}: a ledger is written as .csv or .json")
+    if ledger_file is not None:
+        _check_ledger(ledger_file, out, provenance)
     done, written_out = Done(), _WrittenOut()
     in_full = ledger_file is not None and Path(ledger_file).suffix.lower() == ".json"
     with DelimitedReader(table, layout) as reader:
@@ -78,6 +78,18 @@ def restore_file(
     if ledger_file is not None:
         write_ledger(ledger_file, job.circuit, done.segments, written_out.results, provenance)
     return done
+
+
+def _check_ledger(
+    file: str | os.PathLike[str], out: str | os.PathLike[str] | None, provenance: Mapping[str, Any]
+) -> None:
+    """Refuse at the start what could not be written at the end."""
+    if Path(file).suffix.lower() not in {".csv", ".json"}:
+        raise InputError(f"{os.fspath(file)}: a ledger is written as .csv or .json")
+    check_target(file)
+    refuse_input(file, (record["file"] for record in provenance.get("inputs", ())))
+    if out is not None and Path(file).absolute() == Path(out).absolute():
+        raise InputError(f"{os.fspath(file)}: the ledger and the sites cannot be one file")
 
 
 @dataclass

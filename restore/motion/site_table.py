@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from restore.errors import TableError
 from restore.files.delimited import Chunk, DelimitedReader, parse_numbers
+from restore.files.points import own_names
 from restore.findings import Finding, Place
 from restore.geometry.sphere import Floats
 from restore.history.rows import OLDEST_AGE_MA
@@ -26,6 +27,7 @@ NUMBERS = (
     "position_sigma_km",
 )
 AGES = ("age_ma", "age_young_ma", "age_old_ma", "host_age_ma")
+PLACES = ("lat_deg", "lon_deg", "position_sigma_km")
 ERRORS = ("age_sigma_myr", "position_sigma_km")
 KNOWN_COLUMNS = ("site", *NUMBERS, "plate")
 
@@ -50,6 +52,7 @@ class SiteTable:
     file: str = "sites"
     lines: Sequence[int] = ()
     plate_column: int | None = None
+    header_line: int | None = None
 
     def plate_place(self, row: int) -> Place:
         """Where the plate label of a row stands."""
@@ -78,10 +81,7 @@ class SiteReader:
 
     def __init__(self, reader: DelimitedReader, own_ages: bool) -> None:
         self.reader = reader
-        for name in reader.layout.columns:
-            if name not in KNOWN_COLUMNS:
-                known = ", ".join(KNOWN_COLUMNS)
-                raise TableError(f"{reader.file}: column map: {name!r} is not one of {known}")
+        reader.expect(KNOWN_COLUMNS)
         self.at = {
             name: reader.column(name, required=name in {"lat_deg", "lon_deg"}) for name in KNOWN_COLUMNS
         }
@@ -103,29 +103,29 @@ class SiteReader:
         findings: list[Finding] = []
         count = len(chunk)
         bad = {"place": np.zeros(count, dtype=bool), "age": np.zeros(count, dtype=bool)}
+        for row in (*chunk.surplus, *chunk.short):
+            wrong_length = self.reader.length_fault(chunk, row)
+            if wrong_length is not None:
+                findings.append(wrong_length)
+                bad["place"][row] = bad["age"][row] = True
         for name in NUMBERS:
             values, faults = parse_numbers(chunk, self.at[name], name, decimal)
             numbers[name] = np.array(values, dtype=np.float64)
             if faults:
                 row_of = {line: row for row, line in enumerate(chunk.lines)}
-                group = "place" if name in {"lat_deg", "lon_deg"} else "age"
+                group = "place" if name in PLACES else "age"
                 for fault in faults:
-                    bad[group][row_of[fault.place.line or 0]] = True
-                findings += faults
-        for row in sorted({*chunk.surplus, *chunk.short}):
-            wrong_length = self.reader.length_fault(chunk, row)
-            if wrong_length is not None:
-                findings.append(wrong_length)
-                bad["place"][row] = True
+                    row = row_of[fault.place.line or 0]
+                    bad[group][row] = True
+                    # in a row of another length the values have slipped into other columns
+                    if row not in chunk.surplus and row not in chunk.short:
+                        findings.append(fault)
         self._check_ranges(chunk, numbers, bad, findings)
         labels = self.at["plate"]
         plate = [""] * count if labels is None else [text.strip() for text in chunk.columns[labels]]
         names = self.at["site"]
         site = chunk.columns[names] if names is not None else [str(line) for line in chunk.lines]
-        own: dict[str, Sequence[Any]] = dict(zip(chunk.header, chunk.columns, strict=True))
-        if chunk.surplus:
-            mark = self.reader.layout.delimiter
-            own["surplus_fields"] = [mark.join(chunk.surplus.get(r, [])) for r in range(count)]
+        own: dict[str, Sequence[Any]] = dict(zip(own_names(chunk.header), chunk.columns, strict=True))
         findings.sort(key=lambda f: (f.place.line or 0, f.place.column or 0))
         return SiteTable(
             own,
@@ -139,6 +139,7 @@ class SiteReader:
             chunk.file,
             chunk.lines,
             labels,
+            self.reader.header_line,
         )
 
     def _check_ranges(
@@ -152,12 +153,9 @@ class SiteReader:
             fresh = wrong & ~bad[group]
             bad[group][fresh] = True
             for row in np.flatnonzero(fresh):
-                value = numbers[name][row]
-                what = f"{name} = {value:g}"
-                if np.isnan(value):
-                    column = self.at[name]
-                    text = chunk.columns[column][row].strip() if column is not None else ""
-                    what = f"{name} = {text!r}" if text else f"{name} is empty"
+                column = self.at[name]
+                text = "" if column is None else chunk.columns[column][row].strip()
+                what = f"{name} = {text}" if text else f"{name} is empty"
                 place = chunk.place(int(row), self.at[name])
                 findings.append(Finding("error", "bad value", place, what, remedy=rule))
 
@@ -174,7 +172,9 @@ def range_faults(numbers: Mapping[str, Floats]) -> list[tuple[str, str, NDArray[
         faults.append(("age", name, wrong, f"ages lie in 0..{OLDEST_AGE_MA:g} Ma, positive into the past"))
     for name in ERRORS:
         wrong = ~np.isnan(numbers[name]) & ~((numbers[name] >= 0.0) & np.isfinite(numbers[name]))
-        faults.append(("age", name, wrong, "must not be negative"))
+        faults.append(
+            ("place" if name in PLACES else "age", name, wrong, "must be finite and not negative")
+        )
     young, old = numbers["age_young_ma"], numbers["age_old_ma"]
     half = np.isnan(young) != np.isnan(old)
     faults.append(("age", "age_young_ma", half & np.isnan(young), "a range needs both its ends"))

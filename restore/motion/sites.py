@@ -11,8 +11,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from restore.errors import TableError
 from restore.files.delimited import DelimitedReader, Layout
+from restore.files.points import refuse_result_names
 from restore.findings import Finding, did_you_mean
 from restore.geometry.latitudes import Latitudes
 from restore.geometry.sphere import EARTH_RADIUS_KM, Floats, unit_vectors
@@ -231,7 +231,6 @@ class _Restoring:
             fault = np.where((fault == REACHED) & (asked > host), NOT_FORMED, fault)
         status = np.where(fault != REACHED, fault, moved.status).astype(np.int8)
         results = self._result_columns(moved, asked, status, repeat)
-        columns = self._own_columns(results, repeat)
         if self.own_ages and self.table.has_ranges:
             self._add_ranges(results, status)
         if job.draws is not None:
@@ -240,6 +239,7 @@ class _Restoring:
         codes = np.repeat(np.where(self.fault == REACHED, self.codes, -1), repeat)
         ledger = self._ledger(codes, asked, status)
         results["ledger_id"] = ledger.id_column()
+        columns = self._own_columns(results, repeat)
         start = self.job.latitudes.inward(self.table.numbers["lat_deg"])
         return SiteResults(
             {**columns, **results},
@@ -255,12 +255,11 @@ class _Restoring:
         return np.where(np.isnan(host), np.inf, host)
 
     def _own_columns(self, results: Mapping[str, Any], repeat: int) -> dict[str, Any]:
-        clash = sorted((set(self.table.own) & set(results)) - {"plate"})
-        if clash:
-            raise TableError(
-                f"the site table already has a column {clash[0]!r}, the name of a result;"
-                " give it another name"
-            )
+        table = self.table
+        names, taken = list(table.own), [*results, "plate_from"]
+        if table.plate_column is not None and names[table.plate_column] != "plate":
+            taken.append("plate")
+        refuse_result_names(names, taken, table.file, table.header_line)
         columns = {
             name: [value for value in column for _ in range(repeat)] if repeat > 1 else column
             for name, column in self.table.own.items()

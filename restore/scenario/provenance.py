@@ -12,6 +12,9 @@ from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
+from restore.errors import InputError
+from restore.files.text import why_unreadable
+
 CAUTION = (
     "Not for navigation or safety decisions; check against the primary sources and licensed practice."
     " Errors are those of the rotations' rows (and of sites where said); the model's own error is not"
@@ -39,11 +42,14 @@ def versions() -> dict[str, str]:
 
 
 def sha256_of(path: str | os.PathLike[str]) -> str:
-    """SHA-256 of a file's bytes, as hexadecimal text."""
+    """SHA-256 of a file's bytes, as hexadecimal text; raises InputError if it cannot be read."""
     digest = hashlib.sha256()
-    with Path(path).open("rb") as stream:
-        while block := stream.read(1 << 20):
-            digest.update(block)
+    try:
+        with Path(path).open("rb") as stream:
+            while block := stream.read(1 << 20):
+                digest.update(block)
+    except OSError as exc:
+        raise InputError(f"{os.fspath(path)}: {why_unreadable(exc)}") from None
     return digest.hexdigest()
 
 

@@ -5,17 +5,17 @@ from __future__ import annotations
 import json
 import os
 import time
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 from restore.errors import InputError, OncewhereError, ScenarioError, raise_faults
 from restore.files.atomic import whole_file
-from restore.files.delimited import DelimitedReader, Layout
-from restore.files.points import read_points
+from restore.files.delimited import DelimitedReader
+from restore.files.points import beside, read_points
 from restore.files.tables import TableOut, csv_text, texts
-from restore.findings import Finding, did_you_mean
+from restore.findings import Finding, Place, did_you_mean
 from restore.geometry.latitudes import Latitudes
 from restore.history.audit import audit
 from restore.history.circuit import Circuit
@@ -34,7 +34,7 @@ from restore.scenario.provenance import (
     sha256_of,
     versions,
 )
-from restore.scenario.schema import RatesTask, Scenario, SitesTask, TablePart, read_scenario
+from restore.scenario.schema import RatesTask, Scenario, SitesTask, read_scenario
 
 RECORD = "run.json"
 
@@ -70,16 +70,17 @@ def run_scenario(
     """
     scenario = read_scenario(path)
     history = History.read(scenario.history_file)
-    _check_labels(scenario, history)
+    raise_faults(ScenarioError, label_faults(scenario, history))
     folder = Path(out) if out is not None else Path(path).with_name(f"{Path(path).stem}-results")
     before = _make_folder(folder, go_on)
     run = Run(folder)
     run.findings += audit(history, scenario.root.frame.name)
-    runner = _Runner(scenario, history, run, threads)
+    runner = _Runner(scenario, history, run, threads, before)
+    runner.write_record()
     for task in scenario.tasks:
-        kept = runner.unchanged(task, before.get(task.name))
+        kept = runner.unchanged(task)
         say(f"{task.name}: {'kept' if kept else task.kind}")
-        run.tasks[task.name] = kept or runner.do(task)
+        run.tasks[task.name] = runner.keep(kept) if kept else runner.do(task)
         runner.write_record()
     runner.write_findings()
     runner.write_ledger()
@@ -101,6 +102,8 @@ def _make_folder(folder: Path, go_on: bool) -> dict[str, Any]:
                 return before
             except (ValueError, KeyError, TypeError):
                 raise InputError(f"{record}: is no record of a run; name a new folder") from None
+        elif any(folder.iterdir()):
+            raise InputError(f"{folder}: holds no {RECORD} of an earlier run; name a new folder")
         return {}
     try:
         folder.mkdir(parents=True)
@@ -109,8 +112,16 @@ def _make_folder(folder: Path, go_on: bool) -> dict[str, Any]:
     return {}
 
 
-def _check_labels(scenario: Scenario, history: History) -> None:
-    """Labels that the scenario names must stand in the history, and the frame must be what it says."""
+def _finding(record: Mapping[str, Any]) -> Finding:
+    """A finding from the record of an earlier run."""
+    place = Place(record["file"], record["line"], record["column"])
+    return Finding(
+        record["severity"], record["kind"], place, record["what"], record["km"], record["remedy"]
+    )
+
+
+def label_faults(scenario: Scenario, history: History) -> list[Finding]:
+    """Labels that the scenario names and the history lacks, and a frame that is not what it says."""
     known = history.plates()
     root = scenario.root
     named: list[tuple[tuple[str | int, ...], str]] = [(("frame", "name"), root.frame.name)]
@@ -121,7 +132,7 @@ def _check_labels(scenario: Scenario, history: History) -> None:
     findings = []
     for path, label in named:
         if label not in known:
-            what = f"{path[-1]} = {label!r} is not in the history"
+            what = f"{'frame.' if path[0] == 'frame' else ''}{path[-1]} = {label!r} is not in the history"
             place = scenario.document.place(*path)
             findings.append(Finding("error", "scenario", place, what, remedy=did_you_mean(label, known)))
     stated = history.frames.get(root.frame.name)
@@ -130,25 +141,17 @@ def _check_labels(scenario: Scenario, history: History) -> None:
         remedy = f"the history says that {root.frame.name} is of kind {stated}"
         place = scenario.document.place("frame", "kind")
         findings.append(Finding("error", "scenario", place, what, remedy=remedy))
-    raise_faults(ScenarioError, findings)
-
-
-def layout_of(part: TablePart) -> Layout:
-    """The layout that a task's `table` describes."""
-    return Layout(
-        delimiter=part.delimiter,
-        comment=part.comment,
-        header=part.header,
-        decimal=part.decimal,
-        encoding=part.encoding,
-        columns=dict(part.columns),
-    )
+    return findings
 
 
 class _Runner:
     """Does the tasks of one run and keeps its record."""
 
-    def __init__(self, scenario: Scenario, history: History, run: Run, threads: int) -> None:
+    def __init__(
+        self, scenario: Scenario, history: History, run: Run, threads: int, before: dict[str, Any]
+    ) -> None:
+        self.before = before
+        self.keeps = False
         self.scenario = scenario
         self.history = history
         self.run = run
@@ -175,10 +178,9 @@ class _Runner:
         """The files behind a task."""
         return [self.scenario.path(task.file), *self.history_inputs]
 
-    def unchanged(
-        self, task: SitesTask | RatesTask, before: dict[str, Any] | None
-    ) -> dict[str, Any] | None:
+    def unchanged(self, task: SitesTask | RatesTask) -> dict[str, Any] | None:
         """The earlier record of a task that need not be done again."""
+        before: dict[str, Any] | None = self.before.get(task.name)
         if not before or before.get("state") != "done":
             return None
         same = before.get("settings") == json.loads(json.dumps(self.settings(task)))
@@ -188,12 +190,19 @@ class _Runner:
             same = same and path.is_file() and sha256_of(path) == digest
         return before if same else None
 
+    def keep(self, record: dict[str, Any]) -> dict[str, Any]:
+        """Take over the earlier record of a task, with what was found then."""
+        self.keeps = True
+        self.run.findings += [_finding(found) for found in record.get("findings", ())]
+        return record
+
     def do(self, task: SitesTask | RatesTask) -> dict[str, Any]:
         """Do one task; a fault in its data fails it and not the others."""
         settings, inputs = self.settings(task), self.inputs(task)
         record: dict[str, Any] = {"kind": task.kind, "state": "done", "settings": settings}
         record["inputs"] = input_records(inputs)
         trail = provenance(inputs, settings)
+        already = len(self.run.findings)
         try:
             if isinstance(task, SitesTask):
                 names = self._sites(task, trail, record)
@@ -205,6 +214,7 @@ class _Runner:
             place = self.scenario.document.place("task", self.scenario.tasks.index(task))
             for line in str(exc).splitlines():
                 self.run.findings.append(Finding("error", "task failed", place, f"{task.name}: {line}"))
+        record["findings"] = [found.as_record() for found in self.run.findings[already:]]
         return record
 
     def _sites(self, task: SitesTask, trail: dict[str, Any], record: dict[str, Any]) -> list[str]:
@@ -219,7 +229,7 @@ class _Runner:
         )
         name = f"{task.name}.csv"
         table = self.scenario.path(task.file)
-        done = restore_file(table, job, layout_of(task.table), self.run.folder / name, None, trail)
+        done = restore_file(table, job, task.table.layout(), self.run.folder / name, None, trail)
         record["rows"] = dict(sorted(done.counts.items()))
         self.run.findings += done.findings
         self.segments.update(done.segments)
@@ -227,7 +237,7 @@ class _Runner:
 
     def _rates(self, task: RatesTask, trail: dict[str, Any]) -> list[str]:
         conventions = self.scenario.root.conventions
-        own, lat, lon = read_points(self.scenario.path(task.file), layout_of(task.table))
+        own, lat, lon = read_points(self.scenario.path(task.file), task.table.layout())
         found = rates(
             self.history,
             task.plate,
@@ -240,13 +250,12 @@ class _Runner:
             conventions.radius_km,
             conventions.beyond,
         )
-        columns: dict[str, Any] = {**own, **found.columns()}
         said = {"plate": task.plate, "relative_to": task.relative_to}
         said |= {"latitudes": conventions.latitudes, "errors": "error of rows only"}
-        columns |= {name: [text] * len(lat) for name, text in said.items() if name not in own}
+        results = found.columns() | {name: [text] * len(lat) for name, text in said.items()}
         name = f"{task.name}.csv"
         with TableOut(self.run.folder / name, trail) as target:
-            target.add(columns)
+            target.add(beside(own, results))
         return [name]
 
     def write_findings(self) -> None:
@@ -261,7 +270,7 @@ class _Runner:
         """Write `ledger.csv`: the entries that results of all tasks share; kept tasks' entries stay."""
         path = self.run.folder / "ledger.csv"
         columns = entries(self.circuit, self.segments)
-        if path.is_file():
+        if self.keeps and path.is_file():
             with DelimitedReader(path) as reader:
                 (before,) = reader.chunks(size=2**62)
             if before.header == list(columns):
@@ -274,8 +283,10 @@ class _Runner:
             part.write_text(csv_text(columns), encoding="utf-8")
 
     def write_record(self) -> None:
-        """Write `run.json` as it stands."""
+        """Write `run.json` as it stands; a task that is still to come keeps its earlier record."""
         root = self.scenario.root
+        names = [task.name for task in self.scenario.tasks]
+        coming = {n: self.before[n] for n in names if n in self.before and n not in self.run.tasks}
         record = {
             "title": root.title,
             "made_by": versions(),
@@ -288,7 +299,7 @@ class _Runner:
             "conventions": root.conventions.model_dump(),
             "errors": "error of rows (and of sites where said); the model's own error is not in them",
             "caution": CAUTION,
-            "tasks": self.run.tasks,
+            "tasks": {**self.run.tasks, **coming},
         }
         with whole_file(self.run.folder / RECORD) as part:
             part.write_text(json.dumps(record, indent=2, allow_nan=False) + "\n", encoding="utf-8")
@@ -301,5 +312,6 @@ def said_tasks(run: Run) -> Iterable[str]:
         detail = ""
         if rows:
             detail = " (" + ", ".join(f"{number} {status}" for status, number in rows.items()) + ")"
-        files = ", ".join(record.get("files", {}))
-        yield f"{name}: {record['state']}{detail} {files or record.get('reason', '')}".rstrip()
+        if record["state"] == "failed":
+            detail = ": " + record["reason"].splitlines()[0]
+        yield f"{name}: {record['state']}{detail} {', '.join(record.get('files', {}))}".rstrip()

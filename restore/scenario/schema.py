@@ -7,14 +7,25 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, StrictBool, StrictStr, ValidationError, field_validator
+from pydantic import (
+    BaseModel,
+    ConfigDict,
+    Field,
+    StrictBool,
+    StrictStr,
+    ValidationError,
+    field_validator,
+    model_validator,
+)
 
 from restore.errors import InputError, ScenarioError, raise_faults
+from restore.files.delimited import Layout
 from restore.files.toml import TomlDocument, read_toml
 from restore.findings import Finding, did_you_mean
 from restore.motion.ages import parse_ages
 
 Age = Annotated[float, Field(ge=0.0, allow_inf_nan=False, strict=True)]
+TAKEN = {"findings", "ledger"}
 
 
 class _Part(BaseModel):
@@ -38,7 +49,7 @@ class ConventionsPart(_Part):
     """What numbers mean; these are the defaults."""
 
     latitudes: Literal["as-given", "geodetic"] = "as-given"
-    radius_km: Annotated[float, Field(gt=0.0, allow_inf_nan=False)] = 6371.0088
+    radius_km: Annotated[float, Field(gt=0.0, allow_inf_nan=False, strict=True)] = 6371.0088
     beyond: Literal["refuse", "hold", "extend"] = "refuse"
 
 
@@ -50,7 +61,34 @@ class TablePart(_Part):
     comment: StrictStr = ""
     header: StrictBool = True
     encoding: StrictStr = "utf-8-sig"
-    columns: dict[StrictStr, StrictStr | int] = Field(default_factory=dict)
+    columns: dict[StrictStr, Any] = Field(default_factory=dict)
+
+    @field_validator("columns")
+    @classmethod
+    def _columns(cls, value: dict[str, Any]) -> dict[str, Any]:
+        for ours, theirs in value.items():
+            if not isinstance(theirs, str) and type(theirs) is not int:
+                raise ValueError(f"{ours} = {theirs!r}: must be the name or the number of a column")
+        return value
+
+    @model_validator(mode="after")
+    def _fits(self) -> TablePart:
+        try:
+            self.layout()
+        except InputError as exc:
+            raise ValueError(str(exc)) from None
+        return self
+
+    def layout(self) -> Layout:
+        """The layout that this part describes."""
+        return Layout(
+            delimiter=self.delimiter,
+            comment=self.comment,
+            header=self.header,
+            decimal=self.decimal,
+            encoding=self.encoding,
+            columns=dict(self.columns),
+        )
 
 
 class _Task(_Part):
@@ -58,22 +96,32 @@ class _Task(_Part):
     file: StrictStr
     table: TablePart = TablePart()
 
+    @field_validator("name")
+    @classmethod
+    def _name(cls, value: str) -> str:
+        if value.lower() in TAKEN:
+            raise ValueError(f"{value}.csv is a file of the run itself; give the task another name")
+        return value
+
 
 class SitesTask(_Task):
     """Sites restored to their own ages or to given ones."""
 
     kind: Literal["sites"]
-    ages: StrictStr | Age | list[Age] = "own"
+    ages: Any = "own"
     draws: Annotated[int, Field(ge=1, strict=True)] | None = None
     seed: Annotated[int, Field(ge=0, strict=True)] = 1
 
     @field_validator("ages")
     @classmethod
     def _ages(cls, value: Any) -> Any:
+        numbers = value if isinstance(value, list) else [value]
+        if not isinstance(value, str) and not all(type(number) in {int, float} for number in numbers):
+            raise ValueError("must be 'own', '0:120:10', an age or a list of ages, Ma")
         try:
             parse_ages(value)
         except InputError as exc:
-            raise ValueError(str(exc)) from None
+            raise ValueError(str(exc).removeprefix(f"ages {value!r}: ")) from None
         return value
 
 
@@ -91,7 +139,7 @@ TASKS: dict[str, type[_Task]] = {"sites": SitesTask, "rates": RatesTask}
 
 
 class _Root(_Part):
-    version: Literal[1]
+    version: Annotated[int, Field(ge=1, le=1, strict=True)]
     title: StrictStr = ""
     history: HistoryPart
     frame: FramePart
@@ -134,6 +182,7 @@ def read_scenario(path: str | os.PathLike[str]) -> Scenario:
     tasks = [_task(document, i, values, findings) for i, values in enumerate(_task_values(document))]
     _check_names(document, tasks, findings)
     _check_files(document, findings)
+    findings.sort(key=lambda finding: (finding.place.line or 0, finding.place.column or 0))
     raise_faults(ScenarioError, findings)
     assert root is not None
     return Scenario(document, root, tuple(task for task in tasks if task is not None))  # type: ignore[misc]
@@ -185,29 +234,67 @@ def _finding(
     model: type[BaseModel], error: Any, path: tuple[str | int, ...], document: TomlDocument
 ) -> Finding:
     """A fault of pydantic's in our words."""
-    where = tuple(part for part in error["loc"] if not _is_choice(part))
+    where = error["loc"]
     key = str(where[-1]) if where else ""
     if error["type"] == "extra_forbidden":
         known = _fields(model, where[:-1])
         return _fault(document, (*path, *where), f"unknown key {key!r}", did_you_mean(key, known))
     if error["type"] == "missing":
-        close = did_you_mean(key, [])
-        return _fault(document, (*path, *where), f"the key {key!r} is missing", close)
+        return _fault(document, (*path, *where), f"the key {key!r} is missing", MISSING.get(key, ""))
+    if where == ("task",):
+        return _fault(document, ("task",), "no [[task]] is named", "a scenario needs at least one")
     what = f"{'.'.join(str(part) for part in where)} = {error['input']!r}"
-    remedy = error["msg"].removeprefix("Value error, ").replace("Input should be", "must be")
+    if error["type"] == "value_error" and isinstance(error["input"], dict):
+        what, _, remedy = str(error["ctx"]["error"]).partition(": ")
+        inner = what.partition(" = ")[0]
+        where = (*where, inner) if inner in error["input"] else where
+        return _fault(document, (*path, *where), what, remedy)
+    return _fault(document, (*path, *where), what, _remedy(error))
+
+
+MISSING = {
+    "version": "add version = 1",
+    "history": "add [history] with file = '...'",
+    "frame": "add [frame] with a name and a kind",
+    "task": "add a [[task]]",
+    "name": "it names the result's file",
+    "kind": "must be plate, mantle or spin-axis",
+    "file": "add file = '...'",
+    "plate": "name the plate that moves",
+    "relative_to": "name the plate or frame held still",
+}
+RULES = {
+    "string_pattern_mismatch": "a task's name is the name of its file: letters, digits, - and _",
+    "string_type": "must be a text",
+    "float_type": "must be a number",
+    "float_parsing": "must be a number",
+    "finite_number": "must be finite",
+    "int_type": "must be a whole number",
+    "int_from_float": "must be a whole number",
+    "bool_type": "must be true or false",
+    "dict_type": "must be a table",
+    "model_type": "must be a table",
+    "model_attributes_type": "must be a table",
+}
+
+
+def _remedy(error: Any) -> str:
+    """What would be right, in our words."""
+    context = error.get("ctx", {})
+    if error["type"] == "value_error":
+        return str(context["error"])
+    if error["loc"] == ("version",) and error["type"] != "int_type":
+        return "this release reads version = 1"
     if error["type"] == "literal_error":
-        remedy = "must be " + error["ctx"]["expected"]
-        close = did_you_mean(str(error["input"]), error["ctx"]["expected"].replace("'", "").split(" or "))
-        remedy += f"; {close}" if close.startswith("did") else ""
-    if error["type"] == "string_pattern_mismatch":
-        remedy = "a task's name is the name of its file: letters, digits, - and _"
-    return _fault(document, (*path, *where), what, remedy[:1].lower() + remedy[1:])
-
-
-def _is_choice(part: str | int) -> bool:
-    """Whether a part of pydantic's location names a member of a union and no key of the file."""
-    text = str(part)
-    return "[" in text or text in {"str", "int", "float", "constrained-float"}
+        choices = context["expected"].replace("'", "").replace(" or ", ", ").split(", ")
+        close = did_you_mean(str(error["input"]), choices)
+        hint = f"; {close}" if close.startswith("did") else ""
+        return f"must be {context['expected']}{hint}"
+    if error["type"] in {"greater_than", "greater_than_equal"}:
+        bound = context.get("gt", context.get("ge"))
+        return f"must be {'above' if 'gt' in context else 'at least'} {bound:g}"
+    message: str = error["msg"]
+    return RULES.get(error["type"], message[:1].lower() + message[1:])
 
 
 def _fields(model: type[BaseModel], where: tuple[str | int, ...]) -> list[str]:
@@ -247,5 +334,5 @@ def _check_files(document: TomlDocument, findings: list[Finding]) -> None:
         reason = "is a folder" if (folder / name).is_dir() else "no such file"
         beside = [p.name for p in folder.iterdir() if p.is_file()] if folder.is_dir() else []
         hint = did_you_mean(name, beside)
-        remedy = hint if hint.startswith("did") else f"names are relative to {folder or '.'}"
+        remedy = hint if hint.startswith("did") else "names are relative to the scenario's folder"
         findings.append(_fault(document, path, f"file = {name!r}: {reason}", remedy))
