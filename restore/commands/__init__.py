@@ -21,6 +21,9 @@ COMMANDS = {
     "stage": ("poles", "The motion of a plate from an older to a younger age."),
     "compare": ("poles", "Whether two histories differ, by how much and how surely."),
     "separation": ("separations", "How far apart two sites stood, and in which direction."),
+    "closure": ("loops", "What rotation is left over round a loop of plates."),
+    "differences": ("loops", "The rows in which two histories differ, and by how many km."),
+    "redate": ("redates", "Restate a history or a table of sites to another time scale."),
     "draws": ("draws", "Histories drawn from the errors of the rows."),
 }
 

@@ -12,26 +12,41 @@ from restore.errors import OncewhereError
 
 if TYPE_CHECKING:
     from restore.findings import Finding
+    from restore.history.store import History
 
 
 @click.command()
 @click.argument("file", metavar="HISTORY|SCENARIO")
 @click.option("--json", "as_json", is_flag=True, help="Print the findings as JSON.")
+@click.option(
+    "--rows/--no-rows", "rows", default=None, help="Print what was read, to hold against the paper"
+    " (a manifest's by default)."
+)  # fmt: skip
+@click.option("--out", metavar="FILE.nc", help="Write the history as one netCDF file, if it has no error.")
 @debug_option
-def check(file: str, as_json: bool) -> int:
+def check(file: str, as_json: bool, rows: bool | None, out: str | None) -> int:
     """Say what is wrong or doubtful in a history or a scenario; exit 1 if anything is an error.
 
     \b
-    oncewhere check scenario_files/history.toml
+    oncewhere check scenario_files/history.toml --out history.nc
     """
-    findings = _findings(file)
+    findings, history = _audited(file)
+    failed = any(finding.severity == "error" for finding in findings)
     if as_json:
         print_json([finding.as_record() for finding in findings])
     else:
+        manifest = file.lower().endswith(".toml") and history is not None and not _is_scenario(file)
+        if history is not None and (manifest if rows is None else rows):
+            from restore.history.listing import listing
+
+            click.echo("\n".join(listing(history)))
         for finding in findings:
             click.echo(f"{finding.severity}: {finding.line()}")
         click.echo(_summary(findings), err=True)
-    return 1 if any(finding.severity == "error" for finding in findings) else 0
+    if out is not None and history is not None and not failed:
+        history.write(out)
+        click.echo(f"{len(history)} rows in {out}", err=True)
+    return 1 if failed else 0
 
 
 def _summary(findings: list[Finding]) -> str:
@@ -39,7 +54,8 @@ def _summary(findings: list[Finding]) -> str:
     return ", ".join(counted(number, severity) for severity, number in counts.items())
 
 
-def _findings(file: str) -> list[Finding]:
+def _audited(file: str) -> tuple[list[Finding], History | None]:
+    """The findings of a file, and the history if it can be read at all."""
     from restore.findings import Finding, Place
     from restore.history.audit import audit
     from restore.history.store import History
@@ -51,12 +67,14 @@ def _findings(file: str) -> list[Finding]:
 
             scenario = read_scenario(file)
             history = History.read(scenario.history_file)
-            return label_faults(scenario, history) or audit(history, scenario.root.frame.name)
-        return audit(History.read(file))
+            faults = label_faults(scenario, history)
+            return faults or audit(history, scenario.root.frame.name), history
+        history = History.read(file)
+        return audit(history), history
     except OncewhereError as exc:
         if exc.findings:
-            return list(exc.findings)
-        return [Finding("error", "unreadable", Place(file), _without(str(exc), file))]
+            return list(exc.findings), None
+        return [Finding("error", "unreadable", Place(file), _without(str(exc), file))], None
 
 
 def _without(message: str, file: str) -> str:

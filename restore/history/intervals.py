@@ -37,13 +37,15 @@ class Pieces:
     """Time in pieces: cut, open piece, cut, ..., numbered so that a lookup is one searchsorted.
 
     Piece 2i lies between `cuts[i - 1]` and `cuts[i]`, piece 2i + 1 is the age `cuts[i]` itself.
-    `chain_of` (plates, pieces): number of the plate's chain, or NO_CHAIN, or AMBIGUOUS.
+    `chain_of` (plates, pieces): number of the plate's chain, or NO_CHAIN, or AMBIGUOUS. `conflicts`
+    are loops that do not close, `closings` those that do.
     """
 
     cuts: Floats
     chain_of: NDArray[np.int32]
     chains: tuple[Chain, ...]
     conflicts: tuple[Conflict, ...]
+    closings: tuple[Conflict, ...]
 
     def piece(self, ages: Floats) -> NDArray[np.int64]:
         """The piece in which each age lies."""
@@ -106,7 +108,7 @@ def cut_time(
         before = tuple(sorted((set(before) | set(begun)) - ended))
         columns[:, 2 * i + 2] = builder.tree(before, (), float(cut), older_end)
     columns[:, 0] = builder.tree((), (), 0.0, 0.0)
-    return Pieces(cuts, columns, tuple(builder.chains), tuple(builder.conflicts))
+    return Pieces(cuts, columns, tuple(builder.chains), tuple(builder.conflicts), tuple(builder.closings))
 
 
 class _TreeBuilder:
@@ -129,6 +131,7 @@ class _TreeBuilder:
         self.chains: list[Chain] = []
         self.number: dict[Chain, int] = {}
         self.conflicts: list[Conflict] = []
+        self.closings: list[Conflict] = []
 
     def _chain_number(self, chain: Chain) -> int:
         if chain not in self.number:
@@ -201,8 +204,9 @@ class _TreeBuilder:
             if all(self.pairs[p].rank < self.pairs[pair].rank for p in loop if p != pair):
                 continue
             size = self.misfit(one, other, younger, older)
-            if size > self.tolerance:
-                name = self.names[plate]
-                self.conflicts.append(Conflict(younger, older, name, one, other, size))
+            closes = size <= self.tolerance
+            loops = self.closings if closes else self.conflicts
+            loops.append(Conflict(younger, older, self.names[plate], one, other, size))
+            if not closes:
                 doubtful |= loop
         return doubtful

@@ -6,7 +6,7 @@ import json
 import math
 import os
 from collections.abc import Mapping, Sequence
-from dataclasses import asdict, dataclass, field, fields
+from dataclasses import asdict, dataclass, field, fields, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -119,6 +119,54 @@ class History:
             and dict(self.frames) == dict(other.frames)
             and self.title == other.title
         )
+
+    def add(self, rows: Sequence[Row], title: str = "added") -> History:
+        """A new history with more rows, which keep a table of their own called `title`.
+
+        Raises HistoryError if a row is at fault or stands there already at its pair's age.
+        """
+        table = Table(title=title)
+        own = [replace(row, table=len(self.tables)) for row in rows]
+        return self._rebuilt([*self._single_rows(), *own], (*self.tables, table))
+
+    def replace(self, number: int, row: Row) -> History:
+        """A new history with row `number` (from 0) replaced; the new row keeps the old one's place."""
+        rows = self._single_rows()
+        old = rows[self._checked(number)]
+        rows[number] = replace(row, table=old.table, line=old.line, printed=row.printed or old.printed)
+        return self._rebuilt(rows, self.tables)
+
+    def drop(self, numbers: Sequence[int]) -> History:
+        """A new history without some rows, by number from 0."""
+        gone = {self._checked(number) for number in numbers}
+        return replace(self, rows=self.rows.take([n for n in range(len(self)) if n not in gone]))
+
+    def merge(self, other: History) -> History:
+        """A new history with the rows of both, each row with the table it came from.
+
+        Raises HistoryError if the two call a frame by different kinds or have a pair at one age and
+        rank twice.
+        """
+        for name, kind in other.frames.items():
+            if self.frames.get(name, kind) != kind:
+                raise HistoryError(
+                    f"frame {name!r} is {self.frames[name]} in one history, {kind} in the other"
+                )
+        shifted = [replace(row, table=row.table + len(self.tables)) for row in other._single_rows()]
+        merged = self._rebuilt([*self._single_rows(), *shifted], (*self.tables, *other.tables))
+        title = " + ".join(filter(None, (self.title, other.title)))
+        return replace(merged, frames={**self.frames, **other.frames}, title=title)
+
+    def _single_rows(self) -> list[Row]:
+        return [self.rows.row(number) for number in range(len(self))]
+
+    def _checked(self, number: int) -> int:
+        if not 0 <= number < len(self):
+            raise HistoryError(f"row {number}: the history has rows 0..{len(self) - 1}")
+        return number
+
+    def _rebuilt(self, rows: Sequence[Row], tables: Sequence[Table]) -> History:
+        return History.from_rows(rows, tables, self.frames, self.title)
 
     def to_dataset(self) -> xr.Dataset:
         """The history as an `xarray.Dataset`, without loss; dimension `row`, metadata as attributes."""

@@ -3,23 +3,47 @@
 from __future__ import annotations
 
 from restore.findings import Finding
-from restore.history.audit.chains import differing_chains, partner_jumps, unreached_plates
+from restore.history.audit import chains, pairs, rows
 from restore.history.circuit import Circuit
+from restore.history.links import pairs_of
 from restore.history.store import History
+
+OF_ROWS = (rows.rows_without_reference, rows.rows_without_covariance, rows.mixed_clocks)
+OF_PAIRS = (
+    pairs.slips,
+    pairs.stages_too_fast_or_wide,
+    pairs.antipodal_poles,
+    pairs.rough_velocities,
+)
+OF_CHAINS = (
+    chains.unreached_plates,
+    chains.not_from_present,
+    chains.gaps,
+    chains.partner_jumps,
+    chains.differing_chains,
+    chains.closing_loops,
+    chains.mixed_frames,
+)
+SEVERITIES = ("error", "warning", "note")
 
 
 def audit(history: History, frame: str | None = None) -> list[Finding]:
-    """All findings of a history: those of its reading, then those of its chains to `frame`.
+    """All findings of a history: those of its reading, of its rows, pairs and chains to `frame`.
 
-    Without a frame the label that most plates reach is taken.
+    Errors first, then warnings, then notes. Without a frame a stated mantle or spin-axis frame is
+    taken, else the label that most plates are tied to.
     """
     findings = list(history.findings)
     if not len(history):
         return findings
+    for of_rows in OF_ROWS:
+        findings += of_rows(history)
+    for of_pairs in OF_PAIRS:
+        findings += of_pairs(history, pairs_of(history))
     circuit = Circuit(history, frame or widest_frame(history))
-    for kind in (unreached_plates, differing_chains, partner_jumps):
-        findings += kind(circuit)
-    return findings
+    for of_chains in OF_CHAINS:
+        findings += of_chains(circuit)
+    return sorted(findings, key=lambda finding: SEVERITIES.index(finding.severity))
 
 
 def widest_frame(history: History) -> str:

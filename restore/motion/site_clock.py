@@ -1,0 +1,105 @@
+"""Site ages brought to the clock of the run: by chron where a row has one, else by interpolation."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+
+import numpy as np
+from numpy.typing import NDArray
+
+from restore.errors import InputError
+from restore.files.delimited import Chunk, parse_number
+from restore.findings import Finding
+from restore.geometry.sphere import Floats
+from restore.history.timescale import Chron, Restatement, TimeScale
+
+AGES = ("age_ma", "age_young_ma", "age_old_ma", "host_age_ma")
+
+
+class SiteClock:
+    """Restates the ages of site tables from their own time scale, if they name one, to the run's.
+
+    Raises InputError if ages between the two scales cannot be restated at all.
+    """
+
+    def __init__(self, to: TimeScale, own: TimeScale | None = None) -> None:
+        self.to = to
+        self.restatement = None
+        if own is not None and own.name != to.name:
+            self.restatement = Restatement.between(own, to)
+
+    def restate(
+        self,
+        chunk: Chunk,
+        at: Mapping[str, int | None],
+        numbers: dict[str, Floats],
+        bad_age: NDArray[np.bool_],
+        findings: list[Finding],
+    ) -> list[str]:
+        """Restate `numbers` in place and say for each row how its own age came about.
+
+        `chron`, `interpolated`, or empty. Rows whose ages cannot be restated become bad, with a
+        finding each.
+        """
+        how = [""] * len(chunk)
+        if self.restatement is not None:
+            for name in AGES:
+                self._interpolate(name, chunk, at, numbers, bad_age, findings, how)
+        column = at.get("chron")
+        if column is not None:
+            self._by_chron(chunk, at, column, numbers, bad_age, findings, how)
+        return how
+
+    def _interpolate(
+        self,
+        name: str,
+        chunk: Chunk,
+        at: Mapping[str, int | None],
+        numbers: dict[str, Floats],
+        bad_age: NDArray[np.bool_],
+        findings: list[Finding],
+        how: list[str],
+    ) -> None:
+        assert self.restatement is not None
+        before = numbers[name]
+        after = self.restatement(before)
+        chron = at.get("chron") if name == "age_ma" else None
+        for row in np.flatnonzero(np.isnan(after) & ~np.isnan(before) & ~bad_age):
+            if chron is not None and chunk.columns[chron][row].strip():
+                continue
+            bad_age[row] = True
+            what = f"{name} = {before[row]:g} cannot be restated to {self.to.name}"
+            place = chunk.place(int(row), at.get(name))
+            remedy = f"only {self.restatement.span()} can"
+            findings.append(Finding("error", "outside the scale", place, what, remedy=remedy))
+        if name == "age_ma":
+            for row in np.flatnonzero(~np.isnan(after)):
+                how[row] = "interpolated"
+        numbers[name] = after
+
+    def _by_chron(
+        self,
+        chunk: Chunk,
+        at: Mapping[str, int | None],
+        column: int,
+        numbers: dict[str, Floats],
+        bad_age: NDArray[np.bool_],
+        findings: list[Finding],
+        how: list[str],
+    ) -> None:
+        fractions = at.get("chron_fraction")
+        ages = np.array(numbers["age_ma"])
+        for row, text in enumerate(chunk.columns[column]):
+            if not text.strip() or bad_age[row]:
+                continue
+            try:
+                said = "" if fractions is None else chunk.columns[fractions][row]
+                fraction = parse_number(said) if said.strip() else math.nan
+                ages[row], how[row] = self.to.age_of(Chron.parse(text, fraction)), "chron"
+            except (InputError, ValueError) as exc:
+                bad_age[row] = True
+                place = chunk.place(row, column)
+                what = str(exc) if isinstance(exc, InputError) else f"chron_fraction {exc} is not a number"
+                findings.append(Finding("error", "chron", place, what))
+        numbers["age_ma"] = ages
