@@ -62,12 +62,12 @@ def _audited(file: str) -> tuple[list[Finding], History | None]:
 
     try:
         if Path(file).suffix.lower() == ".toml" and _is_scenario(file):
-            from restore.scenario.run import label_faults
+            from restore.scenario.faults import clock_faults, label_faults
             from restore.scenario.schema import read_scenario
 
             scenario = read_scenario(file)
             history = History.read(scenario.history_file)
-            faults = label_faults(scenario, history)
+            faults = [*label_faults(scenario, history), *clock_faults(scenario, history)]
             return faults or audit(history, scenario.root.frame.name), history
         history = History.read(file)
         return audit(history), history

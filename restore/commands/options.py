@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from restore.files.delimited import Layout
     from restore.findings import Finding
     from restore.history.store import History
+    from restore.motion.site_clock import SiteClock
 
 Decorated = TypeVar("Decorated", bound=Callable[..., Any])
 BEYOND = ("refuse", "hold", "extend")
@@ -165,6 +166,25 @@ def read_history(path: str) -> History:
     history = History.read(path)
     say_findings(history.findings)
     return history
+
+
+def one_clock(
+    history: History, name: str | None, table_name: str | None
+) -> tuple[History, SiteClock | None]:
+    """The history on the run's one clock, and the way of a site table's ages to it."""
+    from restore.history.redate import clock_of
+    from restore.history.redate import one_clock as restated
+    from restore.history.timescale import TimeScale
+    from restore.motion.site_clock import SiteClock
+
+    scale = clock_of(history, name)
+    if scale is None:
+        if table_name is None:
+            return history, None
+        raise click.UsageError("--table-time-scale needs --time-scale: the history names no clock")
+    done = restated(history, scale)
+    say_findings(done.findings)
+    return done.history, SiteClock(scale, TimeScale.read(table_name) if table_name else None)
 
 
 def history_inputs(path: str, history: History) -> list[str]:

@@ -15,6 +15,7 @@ from restore.commands.options import (
     history_option,
     layout_options,
     make_layout,
+    one_clock,
     progress,
     radius_option,
     read_history,
@@ -32,6 +33,9 @@ FRAME_KINDS = ("plate", "mantle", "spin-axis")
 @click.option("--frame-kind", type=click.Choice(FRAME_KINDS), help="Kind of the frame, if the history"
               " does not say.")  # fmt: skip
 @click.option("--ages", type=Ages(), default="own", show_default=True, help="own, 0,10,20 or 0:120:10.")
+@click.option("--time-scale", metavar="SCALE", help="The one clock of the run; ages of tables that name"
+              " another are restated to it.")  # fmt: skip
+@click.option("--table-time-scale", metavar="SCALE", help="The clock of the ages in TABLE.")
 @click.option("--out", metavar="FILE", help="Write here: .csv, .json, .geojson, .nc, .parquet, .gpkg.")
 @click.option("--ledger", "ledger_file", metavar="FILE", help="Write the evidence: .csv or .json.")
 @click.option("--draws", type=click.IntRange(min=1), help="Monte Carlo answers besides the linear ones.")
@@ -47,6 +51,8 @@ def sites(
     frame: str,
     frame_kind: str | None,
     ages: tuple[float, ...] | None,
+    time_scale: str | None,
+    table_time_scale: str | None,
     out: str | None,
     ledger_file: str | None,
     draws: int | None,
@@ -69,7 +75,7 @@ def sites(
     from restore.motion.sites import SiteJob
     from restore.scenario.provenance import provenance
 
-    history = read_history(history_file)
+    history, clock = one_clock(read_history(history_file), time_scale, table_time_scale)
     job = SiteJob(
         Circuit(history, frame, beyond),
         ages,
@@ -78,6 +84,7 @@ def sites(
         frame_kind or history.kind_of(frame),
         default_threads(),
         None if draws is None else Draws(draws, seed),
+        clock,
     )
     settings = {
         "frame": frame,
@@ -87,6 +94,8 @@ def sites(
         "radius_km": radius_km,
         "beyond": beyond,
     }
+    if clock is not None:
+        settings |= {"time_scale": clock.to.name, "table_time_scale": table_time_scale}
     trail = provenance([table, *history_inputs(history_file, history)], settings)
     with progress(table) as advance:
         done = restore_file(

@@ -219,3 +219,19 @@ def one_clock(history: History, to: TimeScale) -> Redated:
         place = Place(table.file, int(history.rows.line[moved.row]) or None)
         findings.append(Finding("note", "restated", place, what, moved.km, ""))
     return Redated(done.history, done.moved, (*findings, *done.findings))
+
+
+def clock_of(history: History, name: str | None, folder: str = ".") -> TimeScale | None:
+    """The one clock of a run: the named scale, else the one that the history's tables name.
+
+    None if nobody names one. Raises HistoryError if the tables name several and none is chosen.
+    """
+    if name:
+        return TimeScale.read(name, folder)
+    named = sorted({table.time_scale for table in history.tables if table.time_scale})
+    if len(named) > 1:
+        raise HistoryError(
+            f"the tables of the history are on {len(named)} clocks ({', '.join(named)}); name one time scale"
+            " for the run"
+        )
+    return TimeScale.read(named[0]) if named else None

@@ -60,7 +60,7 @@ def restore_file(
     done, written_out = Done(), _WrittenOut()
     in_full = ledger_file is not None and Path(ledger_file).suffix.lower() == ".json"
     with DelimitedReader(table, layout) as reader:
-        site_reader = SiteReader(reader, job.ages is None)
+        site_reader = SiteReader(reader, job.ages is None, job.clock)
         with TableOut(out, provenance, POSITION) as target:
             first_row = 0
             for chunk in reader.chunks(CHUNK):

@@ -15,6 +15,7 @@ from restore.files.points import own_names
 from restore.findings import Finding, Place
 from restore.geometry.sphere import Floats
 from restore.history.rows import OLDEST_AGE_MA
+from restore.motion.site_clock import SiteClock
 
 NUMBERS = (
     "lat_deg",
@@ -29,7 +30,7 @@ NUMBERS = (
 AGES = ("age_ma", "age_young_ma", "age_old_ma", "host_age_ma")
 PLACES = ("lat_deg", "lon_deg", "position_sigma_km")
 ERRORS = ("age_sigma_myr", "position_sigma_km")
-KNOWN_COLUMNS = ("site", *NUMBERS, "plate")
+KNOWN_COLUMNS = ("site", *NUMBERS, "plate", "chron", "chron_fraction")
 
 
 @dataclass(eq=False)
@@ -79,8 +80,9 @@ class SiteTable:
 class SiteReader:
     """Finds the columns of a site table once and parses its chunks."""
 
-    def __init__(self, reader: DelimitedReader, own_ages: bool) -> None:
+    def __init__(self, reader: DelimitedReader, own_ages: bool, clock: SiteClock | None = None) -> None:
         self.reader = reader
+        self.clock = clock
         reader.expect(KNOWN_COLUMNS)
         self.at = {
             name: reader.column(name, required=name in {"lat_deg", "lon_deg"}) for name in KNOWN_COLUMNS
@@ -93,7 +95,11 @@ class SiteReader:
                 " an age range needs both"
             )
         self.has_ranges = bool(ranged)
-        if own_ages and self.at["age_ma"] is None and not ranged:
+        if self.at["chron"] is not None and clock is None and self.at["age_ma"] is None:
+            raise TableError(
+                f"{reader.file}:{reader.header_line}: chrons stand instead of ages, and no time scale is named"
+            )
+        if own_ages and self.at["age_ma"] is None and not ranged and self.at["chron"] is None:
             reader.column("age_ma")
 
     def parse(self, chunk: Chunk) -> SiteTable:
@@ -120,6 +126,8 @@ class SiteReader:
                     # in a row of another length the values have slipped into other columns
                     if row not in chunk.surplus and row not in chunk.short:
                         findings.append(fault)
+        if self.clock is not None:
+            self.clock.restate(chunk, self.at, numbers, bad["age"], findings)
         self._check_ranges(chunk, numbers, bad, findings)
         labels = self.at["plate"]
         plate = [""] * count if labels is None else [text.strip() for text in chunk.columns[labels]]

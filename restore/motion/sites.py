@@ -23,6 +23,7 @@ from restore.motion.ages import parse_ages
 from restore.motion.draws import Draws, drawn_columns
 from restore.motion.paths import path_length_km
 from restore.motion.points import Moved, Points, move_common, move_own
+from restore.motion.site_clock import SiteClock
 from restore.motion.site_table import SiteReader, SiteTable, table_from_columns
 
 if TYPE_CHECKING:
@@ -55,6 +56,7 @@ class SiteJob:
     frame_kind: str = "plate"
     threads: int = 1
     draws: Draws | None = None
+    clock: SiteClock | None = None
 
     @property
     def with_errors(self) -> bool:
@@ -150,7 +152,7 @@ def restore_sites(
     if not isinstance(sites, (str, os.PathLike)):
         return restore_table(table_from_columns(sites, asked is None), job)
     with DelimitedReader(sites, layout) as reader:
-        site_reader = SiteReader(reader, asked is None)
+        site_reader = SiteReader(reader, asked is None, job.clock)
         (chunk,) = reader.chunks(size=2**62)
         return restore_table(site_reader.parse(chunk), job)
 

@@ -15,17 +15,21 @@ from restore.files.atomic import whole_file
 from restore.files.delimited import DelimitedReader
 from restore.files.points import beside, read_points
 from restore.files.tables import TableOut, csv_text, texts
-from restore.findings import Finding, Place, did_you_mean
+from restore.findings import Finding, Place
 from restore.geometry.latitudes import Latitudes
 from restore.history.audit import audit
 from restore.history.circuit import Circuit
 from restore.history.ledger import Segment, entries
+from restore.history.redate import one_clock
 from restore.history.store import History
+from restore.history.timescale import TimeScale
 from restore.motion.ages import parse_ages
 from restore.motion.draws import Draws
 from restore.motion.rates import rates
+from restore.motion.site_clock import SiteClock
 from restore.motion.site_files import restore_file
 from restore.motion.sites import SiteJob
+from restore.scenario.faults import clock_faults, label_faults
 from restore.scenario.provenance import (
     CAUTION,
     command_line,
@@ -70,12 +74,14 @@ def run_scenario(
     """
     scenario = read_scenario(path)
     history = History.read(scenario.history_file)
-    raise_faults(ScenarioError, label_faults(scenario, history))
+    raise_faults(ScenarioError, [*label_faults(scenario, history), *clock_faults(scenario, history)])
     folder = Path(out) if out is not None else Path(path).with_name(f"{Path(path).stem}-results")
     before = _make_folder(folder, go_on)
     run = Run(folder)
     run.findings += audit(history, scenario.root.frame.name)
-    runner = _Runner(scenario, history, run, threads, before)
+    history, clock, remarks = on_the_clock(scenario, history)
+    run.findings += remarks
+    runner = _Runner(scenario, history, run, threads, before, clock)
     runner.write_record()
     for task in scenario.tasks:
         kept = runner.unchanged(task)
@@ -120,37 +126,32 @@ def _finding(record: Mapping[str, Any]) -> Finding:
     )
 
 
-def label_faults(scenario: Scenario, history: History) -> list[Finding]:
-    """Labels that the scenario names and the history lacks, and a frame that is not what it says."""
-    known = history.plates()
-    root = scenario.root
-    named: list[tuple[tuple[str | int, ...], str]] = [(("frame", "name"), root.frame.name)]
-    for index, task in enumerate(scenario.tasks):
-        if isinstance(task, RatesTask):
-            named.append((("task", index, "plate"), task.plate))
-            named.append((("task", index, "relative_to"), task.relative_to))
-    findings = []
-    for path, label in named:
-        if label not in known:
-            what = f"{'frame.' if path[0] == 'frame' else ''}{path[-1]} = {label!r} is not in the history"
-            place = scenario.document.place(*path)
-            findings.append(Finding("error", "scenario", place, what, remedy=did_you_mean(label, known)))
-    stated = history.frames.get(root.frame.name)
-    if stated is not None and stated != root.frame.kind:
-        what = f"frame.kind = {root.frame.kind!r}"
-        remedy = f"the history says that {root.frame.name} is of kind {stated}"
-        place = scenario.document.place("frame", "kind")
-        findings.append(Finding("error", "scenario", place, what, remedy=remedy))
-    return findings
+def on_the_clock(
+    scenario: Scenario, history: History
+) -> tuple[History, TimeScale | None, tuple[Finding, ...]]:
+    """The history restated to the scenario's clock, if it names one."""
+    name = scenario.root.history.time_scale
+    if name is None:
+        return history, None, ()
+    clock = TimeScale.read(name, scenario.folder)
+    done = one_clock(history, clock)
+    return done.history, clock, done.findings
 
 
 class _Runner:
     """Does the tasks of one run and keeps its record."""
 
     def __init__(
-        self, scenario: Scenario, history: History, run: Run, threads: int, before: dict[str, Any]
+        self,
+        scenario: Scenario,
+        history: History,
+        run: Run,
+        threads: int,
+        before: dict[str, Any],
+        clock: TimeScale | None,
     ) -> None:
         self.before = before
+        self.clock = clock
         self.keeps = False
         self.scenario = scenario
         self.history = history
@@ -226,6 +227,7 @@ class _Runner:
             self.scenario.root.frame.kind,
             self.threads,
             None if task.draws is None else Draws(task.draws, task.seed),
+            self._site_clock(task),
         )
         name = f"{task.name}.csv"
         table = self.scenario.path(task.file)
@@ -234,6 +236,12 @@ class _Runner:
         self.run.findings += done.findings
         self.segments.update(done.segments)
         return [name]
+
+    def _site_clock(self, task: SitesTask) -> SiteClock | None:
+        if self.clock is None:
+            return None
+        own = TimeScale.read(task.time_scale, self.scenario.folder) if task.time_scale else None
+        return SiteClock(self.clock, own)
 
     def _rates(self, task: RatesTask, trail: dict[str, Any]) -> list[str]:
         conventions = self.scenario.root.conventions

@@ -36,6 +36,7 @@ class HistoryPart(_Part):
     """Which history."""
 
     file: StrictStr
+    time_scale: StrictStr | None = None
 
 
 class FramePart(_Part):
@@ -109,6 +110,7 @@ class SitesTask(_Task):
 
     kind: Literal["sites"]
     ages: Any = "own"
+    time_scale: StrictStr | None = None
     draws: Annotated[int, Field(ge=1, strict=True)] | None = None
     seed: Annotated[int, Field(ge=0, strict=True)] = 1
 
