@@ -292,9 +292,7 @@ def _drawn(draw: st.DrawFn, errors: bool) -> np.ndarray | None:
 
 
 @st.composite
-def chain_cases(
-    draw: st.DrawFn, most_links: int = 6, errors: bool = False, least_links: int = 1
-) -> Case:
+def chain_cases(draw: st.DrawFn, most_links: int = 6, errors: bool = False, least_links: int = 1) -> Case:
     """A chain of links p0 > p1 > ..., each pair listed in one direction or the other."""
     count = draw(st.integers(least_links, most_links))
     rows: list[Row] = []

@@ -28,8 +28,19 @@ COMMANDS = {
 }
 
 
+class _ReaderGoneError(Exception):
+    """The reader of a pipe has seen enough."""
+
+
 class LazyGroup(click.Group):
     """Lists its commands without importing them."""
+
+    def invoke(self, ctx: click.Context) -> Any:
+        try:
+            return super().invoke(ctx)
+        except BrokenPipeError:
+            # click would end with 1, as if something had failed
+            raise _ReaderGoneError from None
 
     def list_commands(self, ctx: click.Context) -> list[str]:
         return list(COMMANDS)
@@ -82,8 +93,8 @@ def call(args: Sequence[str]) -> int:
         return exc.exit_code
     except click.ClickException as exc:
         return _misused(exc)
-    except BrokenPipeError:
-        # the reader of a pipe has seen enough; the interpreter must not complain on its way out
+    except _ReaderGoneError:
+        # the interpreter must not complain on its way out
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
     except (KeyboardInterrupt, click.Abort):

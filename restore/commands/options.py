@@ -216,18 +216,31 @@ def default_threads() -> int:
 
 
 @contextmanager
-def progress(path: str) -> Iterator[Callable[[int], None]]:
-    """A bar on a terminal over the bytes of a file, shown once there is a second chunk; else nothing."""
-    if not sys.stderr.isatty():
+def progress(path: str, out: str | None) -> Iterator[Callable[[int], None]]:
+    """A bar on a terminal over the bytes of a file, shown once there is a second chunk; else nothing.
+
+    A table that goes to the terminal itself leaves no place for a bar.
+    """
+    if not sys.stderr.isatty() or (out is None and sys.stdout.isatty()):
         yield lambda done: None
         return
     from rich.console import Console
     from rich.progress import Progress
 
-    total = os.path.getsize(path) if os.path.isfile(path) else None
-    with Progress(console=Console(stderr=True), transient=True) as bar:
-        task = bar.add_task(os.path.basename(path), total=total)
-        yield lambda done: bar.update(task, completed=done)
+    total = os.path.getsize(path) if os.path.isfile(path) else 0
+    # rich would take standard output to the terminal, away from the file or pipe it goes to
+    bar = Progress(console=Console(stderr=True), transient=True, redirect_stdout=False)
+    task = bar.add_task(os.path.basename(path), total=total)
+
+    def advance(done: int) -> None:
+        if done < total and not bar.live.is_started:
+            bar.start()
+        bar.update(task, completed=done)
+
+    try:
+        yield advance
+    finally:
+        bar.stop()
 
 
 def say_counts(counts: Mapping[str, int]) -> None:

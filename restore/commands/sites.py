@@ -86,7 +86,7 @@ def sites(
         None if draws is None else Draws(draws, seed),
         clock,
     )
-    settings = {
+    settings: dict[str, Any] = {
         "frame": frame,
         "frame_kind": job.frame_kind,
         "ages": "own" if ages is None else list(ages),
@@ -97,7 +97,7 @@ def sites(
     if clock is not None:
         settings |= {"time_scale": clock.to.name, "table_time_scale": table_time_scale}
     trail = provenance([table, *history_inputs(history_file, history)], settings)
-    with progress(table) as advance:
+    with progress(table, out) as advance:
         done = restore_file(
             table, job, make_layout(**layout), out, ledger_file, trail, say_findings, advance
         )

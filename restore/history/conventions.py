@@ -103,6 +103,8 @@ class Table:
     angular velocity is taken to hold. `valid_from_ma`, `valid_to_ma`: the ages for which its pairs are
     meant; outside they do not hold. `time_scale`: the clock of its ages. `plates`, `chrons`: labels
     as printed -> as meant; a paper's own anomaly names need a stated pick, such as "6y" -> "C6n(y)".
+    `constants`: our text columns that are the same in every row; `only`: the table's columns and the
+    texts that the rows to be read have there.
     """
 
     file: str = ""
@@ -119,6 +121,8 @@ class Table:
     layout: Layout = field(default_factory=lambda: Layout(comment="#"))
     plates: tuple[tuple[str, str], ...] = ()
     chrons: tuple[tuple[str, str], ...] = ()
+    constants: tuple[tuple[str, str], ...] = ()
+    only: tuple[tuple[str, str], ...] = ()
 
     def label(self, printed: str) -> str:
         """The plate label of this history for one printed in the table."""

@@ -27,6 +27,7 @@ LAYOUT_KEYS: dict[str, type | tuple[type, ...]] = {
     "encoding": str,
     "columns": dict,
 }
+CONSTANT_COLUMNS = ("plate", "relative_to", "chron", "reference", "note", "covariance_in")
 TABLE_KEYS: dict[str, type | tuple[type, ...]] = {
     "file": str,
     "title": str,
@@ -42,6 +43,8 @@ TABLE_KEYS: dict[str, type | tuple[type, ...]] = {
     "valid_to_ma": (int, float),
     "time_scale": str,
     "chrons": dict,
+    "constants": dict,
+    "only": dict,
 }
 
 
@@ -146,8 +149,7 @@ def _table(document: TomlDocument, index: int, values: object, findings: list[Fi
         valid_from_ma=float(values.get("valid_from_ma", 0.0)),
         valid_to_ma=float(values.get("valid_to_ma", math.inf)),
         time_scale=time_scale,
-        plates=tuple((str(k), str(v)) for k, v in values.get("plates", {}).items()),
-        chrons=tuple((str(k), str(v)) for k, v in values.get("chrons", {}).items()),
+        **{key: _texts(values.get(key, {})) for key in ("plates", "chrons", "constants", "only")},
     )
 
 
@@ -155,6 +157,10 @@ def _check_values(
     document: TomlDocument, values: Mapping[str, Any], path: tuple[str | int, ...], findings: list[Finding]
 ) -> None:
     """Numbers and choices of one table."""
+    for key in values.get("constants", {}) if isinstance(values.get("constants", {}), dict) else ():
+        if key not in CONSTANT_COLUMNS:
+            hint = did_you_mean(key, CONSTANT_COLUMNS)
+            findings.append(_fault(document, f"unknown key {key!r}", hint, *path, "constants", key))
     for key in ("join_within_myr", "rates_hold_to_ma", "valid_from_ma", "valid_to_ma"):
         value = values.get(key, 1)
         endless = key == "valid_to_ma" and value == math.inf
@@ -200,3 +206,8 @@ def _time_scale(
     what = f"time_scale = {name!r} is neither a known scale nor a file beside the manifest"
     findings.append(_fault(document, what, did_you_mean(name, SOURCES), *path, "time_scale"))
     return None
+
+
+def _texts(mapping: Mapping[str, Any]) -> tuple[tuple[str, str], ...]:
+    """A table of a manifest as pairs of texts."""
+    return tuple((str(key), str(value)) for key, value in mapping.items())

@@ -62,15 +62,26 @@ class _TableReading:
         self.table = replace(table, file=reader.file)
         self.number = number
         self.findings: list[Finding] = []
+        self.constants = dict(table.constants)
+        self.only = [(self._place_of(name), text) for name, text in table.only]
         self.columns = self._find_columns()
         self.scale = TimeScale.read(table.time_scale) if table.time_scale else None
         self.omega_unit = self._omega_unit()
+
+    def _place_of(self, theirs: str) -> int:
+        """The place of one of the table's own columns, by name, or by number without a header."""
+        if theirs not in self.reader.header:
+            hint = did_you_mean(theirs, self.reader.header)
+            place = f"{self.reader.file}:{self.reader.header_line}"
+            raise TableError(f"{place}: only: column {theirs!r} is missing; {hint}")
+        return self.reader.header.index(theirs)
 
     def _find_columns(self) -> dict[str, int]:
         columns: dict[str, int] = {}
         self.reader.expect(KNOWN_COLUMNS)
         for name in (*NUMBERS, *TEXTS):
-            place = self.reader.column(name, required=name in {"plate", "relative_to"})
+            required = name in {"plate", "relative_to"} and name not in self.constants
+            place = self.reader.column(name, required=required)
             if place is not None:
                 columns[name] = place
         return columns
@@ -87,7 +98,9 @@ class _TableReading:
                 missing = [n for n in ("age_ma", "angle_deg") if n not in self.columns]
                 close = did_you_mean("angle_deg", set(self.reader.header) - KNOWN_COLUMNS)
                 hint = close if close.startswith("did") else "or rate_deg_per_myr, or omega_x.. with unit"
-                raise TableError(f"{place}: column {' and '.join(map(repr, missing))} is missing; {hint}")
+                if any(name.startswith("omega_") for name in self.reader.header):
+                    hint = "omega columns end in their unit: " + ", ".join(RADIANS_PER_MYR)
+                raise TableError(f"{place}: column {', '.join(map(repr, missing))} is missing; {hint}")
             raise TableError(
                 f"{place}: angles, rates and angular velocities stand side by side;"
                 " a table gives one of them"
@@ -106,6 +119,8 @@ class _TableReading:
         rows: list[Row] = []
         for chunk in self.reader.chunks():
             for at in range(len(chunk)):
+                if any(chunk.columns[column][at].strip() != text for column, text in self.only):
+                    continue
                 fault = self.reader.length_fault(chunk, at)
                 if fault is not None:
                     self.findings.append(fault)
@@ -119,7 +134,7 @@ class _TableReading:
         if not rows and not self.findings:
             place = Place(self.reader.file, self.reader.header_line)
             remedy = "a history needs at least one finite rotation"
-            what = "the table has a header and no rows"
+            what = "the table has a header and no rows" + (" of those asked for" if self.only else "")
             self.findings.append(Finding("error", "no rows", place, what, remedy=remedy))
         return rows, self.findings
 
@@ -147,7 +162,9 @@ class _TableReading:
 
     def _text(self, chunk: Chunk, at: int, name: str) -> str:
         column = self.columns.get(name)
-        return "" if column is None else chunk.columns[column][at].strip()
+        if column is None:
+            return self.constants.get(name, "")
+        return chunk.columns[column][at].strip()
 
     def _rows(self, chunk: Chunk, at: int) -> list[Row]:
         numbers = self._numbers(chunk, at)

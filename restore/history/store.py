@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from restore.errors import HistoryError, InputError, raise_faults
+from restore.errors import HistoryError, InputError, TableError, raise_faults
 from restore.files.delimited import Layout
 from restore.findings import Finding
 from restore.geometry.uncertain import RowErrors
@@ -47,7 +47,7 @@ class History:
     def read(cls, path: str | os.PathLike[str]) -> History:
         """Read a history: a CSV table, a `.toml` manifest or a `.nc` file, told by the ending.
 
-        Raises HistoryError (or TableError) with one line per fault, all faults of the rows at once.
+        Raises HistoryError with one line per fault, all faults of the rows at once.
         """
         ending = Path(path).suffix.lower()
         if ending in NETCDF_ENDINGS:
@@ -61,10 +61,18 @@ class History:
     def _read_tables(cls, tables: Sequence[Table], frames: Mapping[str, str], title: str) -> History:
         rows: list[Row] = []
         findings: list[Finding] = []
+        broken: list[str] = []
         for number, table in enumerate(tables):
-            its_rows, its_findings = read_table(table.file, table, number)
+            try:
+                its_rows, its_findings = read_table(table.file, table, number)
+            except TableError as exc:
+                broken.append(str(exc))
+                continue
             rows += its_rows
             findings += its_findings
+        if broken:
+            faults = [finding.line() for finding in findings if finding.severity == "error"]
+            raise HistoryError("\n".join(broken + faults))
         findings += check_rows(rows, tables)
         raise_faults(HistoryError, findings)
         return cls(Rows.from_rows(rows), tuple(tables), frames, title, tuple(findings))
@@ -273,7 +281,7 @@ def _table_from_record(record: dict[str, Any]) -> Table:
     record["conventions"] = Conventions(**record["conventions"])
     record["layout"] = Layout(**record["layout"])
     record["valid_to_ma"] = math.inf if record["valid_to_ma"] is None else record["valid_to_ma"]
-    for name in ("plates", "chrons"):
+    for name in ("plates", "chrons", "constants", "only"):
         record[name] = tuple((a, b) for a, b in record[name])
     return Table(**record)
 

@@ -90,9 +90,7 @@ def test_distance_and_azimuth_undo_destination(start, azimuth, angle):
 def test_destination_undoes_distance_and_azimuth(start, azimuth, angle):
     """Going the measured distance along the measured azimuth arrives within 1e-8 m."""
     end = sphere.destination(start, azimuth, angle)
-    found = sphere.destination(
-        start, sphere.azimuth_deg(start, end), sphere.angular_distance(start, end)
-    )
+    found = sphere.destination(start, sphere.azimuth_deg(start, end), sphere.angular_distance(start, end))
     within(metres_apart(found, end), 1e-8)
 
 
@@ -139,9 +137,7 @@ def test_an_azimuth_is_measured_clockwise_from_north(x, azimuth):
     lat, lon = math.radians(sphere.lat_lon(x)[0]), math.radians(sphere.lat_lon(x)[1])
     step = sphere.destination(x, azimuth, angle) - x
     east = np.array([-math.sin(lon), math.cos(lon), 0.0])
-    north = np.array(
-        [-math.sin(lat) * math.cos(lon), -math.sin(lat) * math.sin(lon), math.cos(lat)]
-    )
+    north = np.array([-math.sin(lat) * math.cos(lon), -math.sin(lat) * math.sin(lon), math.cos(lat)])
     turn = math.radians(azimuth)
     within((step @ east - angle * math.sin(turn)) * R_M, 1e-8)
     within((step @ north - angle * math.cos(turn)) * R_M, 1e-8)

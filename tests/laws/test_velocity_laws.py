@@ -111,8 +111,7 @@ def test_linear_results_follow_the_rows(case, data):
     random = np.random.default_rng(data.draw(st.integers(0, 1000)))
     on_rotation, on_velocity = random.normal(size=(2, 3, 3))
     results = [
-        Functional(c.reshape(1, 3), b.reshape(1, 3))
-        for c, b in zip(on_rotation, on_velocity, strict=True)
+        Functional(c.reshape(1, 3), b.reshape(1, 3)) for c, b in zip(on_rotation, on_velocity, strict=True)
     ]
     found = Circuit(case.history(), case.frame).at(case.plate, age)
     jacobians = sensitivity(found, results)
@@ -140,8 +139,7 @@ def linear_change(
     """d (c . u + b . eta) by a small rotation of one row about an axis: three results at once."""
     home = case.rotation(age).inv()
     ends = [
-        case.with_row(number, perturbed(case.rows[number], sign * STEP_RAD * axis))
-        for sign in (1.0, -1.0)
+        case.with_row(number, perturbed(case.rows[number], sign * STEP_RAD * axis)) for sign in (1.0, -1.0)
     ]
     turns = [(home * end.rotation(age)).as_rotvec() for end in ends]
     rates = [velocity_of(end, age) for end in ends]

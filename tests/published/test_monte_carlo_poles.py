@@ -1,8 +1,8 @@
 """Errors of finite poles, stage poles and rates against Monte Carlo by a program of its own.
 
 Rows are drawn and recomposed as in simulation.py. Covariances and sigmas must agree within 2 %
-(sampling error 0.7 %, of rates 1.2 %), 95 % ellipses of poles must hold 94.5 to 95.5 % of 1e5 draws (0.07 %).
-All draws are seeded.
+(sampling error below 0.7 %, of rates 1.2 %), 95 % ellipses of poles must hold 94.5 to 95.5 % of
+1e5 draws (0.07 %). All draws are seeded.
 """
 
 from __future__ import annotations

@@ -259,9 +259,7 @@ def test_the_column_map(read):
 def test_a_column_number_that_is_not_there(read, number):
     """A mapped number outside the table is refused, also for a column that is not required."""
     reader, _ = read("a,b,c,d\n", columns={"age_ma": number})
-    with pytest.raises(
-        TableError, match=rf"t\.csv:1: column {number} was named for age_ma, but .* 4 "
-    ):
+    with pytest.raises(TableError, match=rf"t\.csv:1: column {number} was named for age_ma, but .* 4 "):
         reader.column("age_ma", required=False)
 
 
@@ -272,9 +270,7 @@ def test_a_missing_column_is_placed_and_a_near_name_is_offered(read):
     with pytest.raises(TableError, match=message):
         reader.column("lat_deg")
     mapped, _ = read("site,Breite\n", columns={"lat_deg": "breite"})
-    with pytest.raises(
-        TableError, match=r"'breite' \(for lat_deg\) is missing; did you mean 'Breite'"
-    ):
+    with pytest.raises(TableError, match=r"'breite' \(for lat_deg\) is missing; did you mean 'Breite'"):
         mapped.column("lat_deg", required=False)
 
 

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from strategies import turn_of, vector_of, within
 
-from restore.errors import HistoryError, TableError
+from restore.errors import HistoryError
 from restore.history.circuit import Circuit
 from restore.history.conventions import Conventions
 from restore.history.manifest import read_manifest
@@ -156,8 +156,7 @@ def test_all_faults_at_once(tmp_path):
     with pytest.raises(HistoryError, match="version = 9") as caught:
         read_manifest(lay_out(tmp_path, text))
     places = [
-        line.partition("history.toml:")[2].partition(": ")[0]
-        for line in str(caught.value).splitlines()
+        line.partition("history.toml:")[2].partition(": ")[0] for line in str(caught.value).splitlines()
     ]
     assert places == ["1:1", "11:1", "21:1"]
 
@@ -172,16 +171,14 @@ def test_a_manifest_without_tables(tmp_path, text):
 @pytest.mark.parametrize("text", ["version = 1\ntable = 3\n", "version = 1\ntable = [3]\n"])
 def test_tables_that_are_no_tables(tmp_path, text):
     """`table` as a number or an array of numbers is refused, not read."""
-    with pytest.raises(
-        HistoryError, match=r"toml:2:\d+: (table = 3; must be an array|table is not a)"
-    ):
+    with pytest.raises(HistoryError, match=r"toml:2:\d+: (table = 3; must be an array|table is not a)"):
         read_manifest(lay_out(tmp_path, text))
 
 
 def test_a_table_that_is_not_there(tmp_path):
     """A file that the manifest names and that is missing is named."""
     path = lay_out(tmp_path, MANIFEST.replace("a.csv", "nothing.csv"))
-    with pytest.raises(TableError, match=r"nothing\.csv: no such file"):
+    with pytest.raises(HistoryError, match=r"nothing\.csv: no such file"):
         History.read(path)
 
 

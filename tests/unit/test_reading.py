@@ -56,9 +56,7 @@ WAYS = list(
 
 
 @pytest.mark.parametrize(("turns", "holds", "sense", "covariance_in", "antipode"), WAYS)
-def test_every_way_to_print_a_row_is_read_as_meant(
-    table, turns, holds, sense, covariance_in, antipode
-):
+def test_every_way_to_print_a_row_is_read_as_meant(table, turns, holds, sense, covariance_in, antipode):
     """A rotation and its covariance, printed in any convention that is described, read alike.
 
     Rotation to 1e-14 rad (the print has 17 digits), covariance to 1e-12 of its size.
@@ -201,14 +199,10 @@ def test_labels_are_restated(table):
 def test_a_headerless_table_by_number(table):
     """Columns by number, decimal commas, another delimiter and comment mark."""
     columns = {"plate": 2, "relative_to": 1, "age_ma": 6, "angle_deg": 5, "pole_lat_deg": 3}
-    layout = Layout(
-        "whitespace", "%", header=False, decimal=",", columns={**columns, "pole_lon_deg": 4}
-    )
+    layout = Layout("whitespace", "%", header=False, decimal=",", columns={**columns, "pole_lon_deg": 4})
     rows, findings = table("% c\nB A 40,5 -50 5,25 10 % end\n", layout=layout)
     assert findings == []
-    assert [(r.plate, r.pole_lat_deg, r.angle_deg, r.age_ma) for r in rows] == [
-        ("A", 40.5, 5.25, 10.0)
-    ]
+    assert [(r.plate, r.pole_lat_deg, r.angle_deg, r.age_ma) for r in rows] == [("A", 40.5, 5.25, 10.0)]
 
 
 ROW_FAULTS = [
@@ -297,9 +291,7 @@ def test_faults_of_the_header(table, header, said):
 def test_a_column_map_with_a_name_that_is_not_ours(table):
     """The map's left side is our name; a misspelt one is refused with the near one."""
     layout = Layout(columns={"pole_lat": "lat"})
-    with pytest.raises(
-        TableError, match=r"column map: 'pole_lat' is .*did you mean 'pole_lat_deg'"
-    ):
+    with pytest.raises(TableError, match=r"column map: 'pole_lat' is .*did you mean 'pole_lat_deg'"):
         table(f"{HEAD}\n", layout=layout)
 
 
@@ -307,6 +299,5 @@ def test_a_table_without_rows(refused):
     """A header alone is no history."""
     (line,) = refused(f"{HEAD}\n# nothing\n")
     assert (
-        line == "t.csv:1: the table has a header and no rows;"
-        " a history needs at least one finite rotation"
+        line == "t.csv:1: the table has a header and no rows; a history needs at least one finite rotation"
     )

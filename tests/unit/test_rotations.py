@@ -21,9 +21,7 @@ def test_a_quaternion_without_a_direction_is_refused(value):
     q = random_quaternions(91, 6).reshape(2, 3, 4)
     q[1, 2] = 0.0
     q[1, 2, 1] = value
-    with pytest.raises(
-        ValueError, match=r"quaternion \(1, 2\) is \[.*\]: its length must be finite"
-    ):
+    with pytest.raises(ValueError, match=r"quaternion \(1, 2\) is \[.*\]: its length must be finite"):
         Rotations.from_quaternions(q)
 
 
@@ -44,9 +42,7 @@ def test_rotation_vectors_need_three_components(bad):
 @pytest.mark.parametrize("bad", [np.eye(4), np.zeros(9), np.zeros((3, 3, 2)), np.zeros((0, 3))])
 def test_matrices_need_three_by_three(bad):
     """The message names the shape that came and what it must end in."""
-    with pytest.raises(
-        ValueError, match=r"matrices have shape \(.*\): the last two axes must be 3"
-    ):
+    with pytest.raises(ValueError, match=r"matrices have shape \(.*\): the last two axes must be 3"):
         Rotations.from_matrices(bad)
 
 
@@ -165,6 +161,4 @@ def test_words():
         "Rotations(pole_lat_deg=10, pole_lon_deg=20, angle_deg=30)"
     )
     assert repr(Rotations.identity((2, 3))) == "Rotations(shape=(2, 3))"
-    assert repr(Rotations.identity()) == (
-        "Rotations(pole_lat_deg=nan, pole_lon_deg=nan, angle_deg=0)"
-    )
+    assert repr(Rotations.identity()) == ("Rotations(pole_lat_deg=nan, pole_lon_deg=nan, angle_deg=0)")

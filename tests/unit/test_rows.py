@@ -113,9 +113,7 @@ def test_two_rows_of_one_age():
 
 def test_rows_out_of_order_are_a_warning():
     """Rows that are not sorted by age are read all the same, with a warning at the later line."""
-    history = History.from_rows(
-        [changed(age_ma=20.0, line=2), changed(line=3)], [Table(file="t.csv")]
-    )
+    history = History.from_rows([changed(age_ma=20.0, line=2), changed(line=3)], [Table(file="t.csv")])
     assert [(f.severity, f.kind, f.place.line) for f in history.findings] == [
         ("warning", "unsorted ages", 3)
     ]
@@ -196,9 +194,7 @@ def test_same_as_sees_every_column():
 
 def test_rotations_of_rows():
     """Each row's rotation is its pole's; zero rows give the zero rotation."""
-    rows = Rows.from_rows(
-        [changed(pole_lat_deg=90.0, angle_deg=90.0), changed(age_ma=20.0, angle_deg=0.0)]
-    )
+    rows = Rows.from_rows([changed(pole_lat_deg=90.0, angle_deg=90.0), changed(age_ma=20.0, angle_deg=0.0)])
     turned = rows.rotations().apply([1.0, 0.0, 0.0])
     assert np.allclose(turned, [[0, 1, 0], [1, 0, 0]], rtol=0.0, atol=1e-15)
     assert isinstance(rows.rotations(), Rotations)

@@ -72,7 +72,7 @@ def test_stage_jacobian(fraction):
 
 @pytest.mark.parametrize("fraction", FRACTIONS)
 def test_stage_weights_one_by_one(fraction):
-    """Along, across and turned, each to 1e-13 of itself, tiny ones included. Measured: 5e-16.
+    """Along, across and turned, each to 1e-13 of itself, tiny ones included. Measured: 1.4e-14.
 
     Read off the 80-digit matrix of a stage about z. Where a weight passes through zero as the angle
     goes by (across, turned: near whole quarter turns) rounding of the angle itself, 1e-16 of the
@@ -82,7 +82,8 @@ def test_stage_weights_one_by_one(fraction):
         truth = mp_stage_jacobian(np.array([0.0, 0.0, angle]), fraction)
         along, across, turned = truth[2, 2], truth[0, 0], truth[1, 0]
         found = so3.stage_weights(fraction, 0.5 * angle)
-        floor = mp.mpf(4e-16) * max(abs(across), abs(turned)) if angle > 1.0 else mp.mpf("1e-60")
+        floor = mp.mpf(4e-16) * max(abs(across), abs(turned)) if angle > 1.0 else 0
+        floor += mp.mpf("1e-60")
         for mine, right in zip(found, (along, across, turned), strict=True):
             misfit = abs(mp.mpf(float(mine)) - right)
             within(float(misfit / (abs(right) + floor / RELATIVE)), RELATIVE, f"angle {angle:.3g}")
@@ -112,10 +113,7 @@ def test_many_stages_at_once():
 
 
 def test_the_exponential():
-    """Quaternions of rotation vectors 1e-12 .. pi, each component to 1e-13 of itself but w at pi.
-
-    Measured: 4e-16.
-    """
+    """Quaternions of rotation vectors 1e-12 .. pi, each component to 1e-13 but w at pi."""
     for angle in ANGLES:
         for axis in AXES:
             v = angle * axis
@@ -141,9 +139,7 @@ def test_the_logarithm():
             sine = mp.sqrt(sum(c * c for c in v))
             truth = [2 * mp.atan2(sine, w) / sine * c for c in v]
             found = so3.logarithm(q)
-            worst = max(
-                abs(mp.mpf(float(mine)) - right) for mine, right in zip(found, truth, strict=True)
-            )
+            worst = max(abs(mp.mpf(float(mine)) - right) for mine, right in zip(found, truth, strict=True))
             within(float(worst) / angle, RELATIVE)
 
 

@@ -97,9 +97,7 @@ def test_vectors_out_and_in():
     misfit[half] = np.minimum(misfit, np.linalg.norm(ours + theirs, axis=1))[half]
     within(misfit, BAR_RAD)
     vectors = np.concatenate([degenerate_vectors(), 7.0 * random_quaternions(63, COUNT)[:, 1:]])
-    within(
-        apart(Rotations.from_vectors(vectors).quaternions, Rotation.from_rotvec(vectors)), BAR_RAD
-    )
+    within(apart(Rotations.from_vectors(vectors).quaternions, Rotation.from_rotvec(vectors)), BAR_RAD)
 
 
 def test_tiny_vectors_keep_their_digits():

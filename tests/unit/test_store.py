@@ -28,9 +28,7 @@ def full_history() -> History:
             from_present=True,
             join_within_myr=0.1,
             rates_hold_to_ma=3.3,
-            layout=Layout(
-                "semicolon", "%", True, False, ",", "latin-1", {"age_ma": 3, "plate": "P"}
-            ),
+            layout=Layout("semicolon", "%", True, False, ",", "latin-1", {"age_ma": 3, "plate": "P"}),
             plates=(("NA", "norda"), ("AF", "afra")),
         ),
         Table(),
@@ -75,10 +73,7 @@ def test_netcdf_round_trip(tmp_path):
     assert back.same_as(history)
     assert history.same_as(back)
     assert back.tables == history.tables
-    assert (
-        np.signbit(back.rows.pole_lon_deg).tolist()
-        == np.signbit(history.rows.pole_lon_deg).tolist()
-    )
+    assert np.signbit(back.rows.pole_lon_deg).tolist() == np.signbit(history.rows.pole_lon_deg).tolist()
     assert sorted(p.name for p in tmp_path.iterdir()) == ["h.nc"]
 
 
@@ -183,9 +178,7 @@ def test_netcdf_files_that_cannot_be_read(tmp_path):
 @pytest.mark.parametrize("name", ["h.csv", "h", "h.toml"])
 def test_other_endings_are_refused(tmp_path, name):
     """A history is written as netCDF only, and the message says so."""
-    with pytest.raises(
-        InputError, match=rf"{name}: a history is written as netCDF; end the name in"
-    ):
+    with pytest.raises(InputError, match=rf"{name}: a history is written as netCDF; end the name in"):
         full_history().write(tmp_path / name)
     assert list(tmp_path.iterdir()) == []
 
@@ -220,7 +213,5 @@ def test_errors_of_rows():
 def test_kinds_of_frames():
     """The three kinds are taken; another is refused, naming all three."""
     assert [check_frame_kind(k) for k in ("plate", "mantle")] == ["plate", "mantle"]
-    with pytest.raises(
-        InputError, match="frame kind 'moon': must be one of plate, mantle, spin-axis"
-    ):
+    with pytest.raises(InputError, match="frame kind 'moon': must be one of plate, mantle, spin-axis"):
         check_frame_kind("moon")
