@@ -48,7 +48,7 @@ def unit_vectors(lat_deg: ArrayLike, lon_deg: ArrayLike) -> Floats:
 def lat_lon(vectors: ArrayLike) -> tuple[Floats, Floats]:
     """Latitude and longitude in degrees, longitude in [-180, 180), of vectors `(..., 3)`.
 
-    The vectors need not have unit length. At a pole the longitude is 0; a zero vector and NaN give
+    The vectors need not have unit length (any from 1e-150 to 1e150). At a pole the longitude is 0; a zero vector and NaN give
     NaN.
     """
     v = np.asarray(vectors, dtype=np.float64)

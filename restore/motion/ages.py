@@ -17,8 +17,8 @@ def parse_ages(asked: str | float | Iterable[float]) -> tuple[float, ...] | None
     """Ages in Ma, or None for `own`: from "own", "0,10,20", "0:120:10" (stop included), a number or
     a sequence of numbers.
 
-    Raises InputError if an age is not a number, is negative or not finite, or a step does not lead
-    from start to stop.
+    A stop that no whole number of steps reaches ends the list all the same. Raises InputError if an age
+    is not a number, is negative or not finite, or a step does not lead from start towards stop.
     """
     if isinstance(asked, str):
         if asked.strip() == "own":
@@ -63,4 +63,5 @@ def _stepped(asked: str) -> list[float]:
     # rounding may put the last step a hair beyond the stop that the user wrote
     whole = math.floor(count + 1e-9)
     # decimal steps such as 0.1 are meant as decimals: 0.3, not 0.30000000000000004
-    return [min(float(f"{start + i * step:.12g}"), stop) for i in range(whole + 1)]
+    ages = [min(float(f"{start + i * step:.12g}"), stop) for i in range(whole + 1)]
+    return ages if ages[-1] == stop else [*ages, stop]

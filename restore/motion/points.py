@@ -104,7 +104,7 @@ def move_own(
     chain, status, used = circuit.find(points.codes, ages)
     count = len(chain)
     spread = Spread.unknown((count,)) if errors else None
-    out = Moved(np.full(count, np.nan), np.full(count, np.nan), status, used, spread)
+    out = Moved(np.full(count, np.nan), np.full(count, np.nan), status, np.array(used), spread)
     table = _CovarianceTable(circuit) if errors else None
 
     def task(its_chain: Chain, items: NDArray[np.int64]) -> None:
@@ -220,7 +220,9 @@ def _move_with_errors(
 
     A point's step is `A (u x x)`; along east that is `u . A^T north`, along north `-u . A^T east`.
     """
-    steps = list(links.steps_along(circuit.stages, chain, out.ages[items]))
+    # at a row's age a site's own age error moves it at the rate of the stage just younger
+    just_younger = points.age_sigma is not None
+    steps = list(links.steps_along(circuit.stages, chain, out.ages[items], just_younger))
     turn = _composed(steps, len(items))
     moved = so3.rotate(turn, start)
     _write(out, items, points, moved)
