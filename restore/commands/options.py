@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from restore.files.delimited import Layout
     from restore.findings import Finding
     from restore.history.store import History
+    from restore.motion.ground import Ground
     from restore.motion.site_clock import SiteClock
 
 Decorated = TypeVar("Decorated", bound=Callable[..., Any])
@@ -185,6 +186,40 @@ def one_clock(
     done = restated(history, scale)
     say_findings(done.findings)
     return done.history, SiteClock(scale, TimeScale.read(table_name) if table_name else None)
+
+
+def riding(history: History, file: str | None) -> History:
+    """The history with the pieces that a table of rides names."""
+    if file is None:
+        return history
+    from restore.history.riding import read_rides, with_rides
+
+    return with_rides(history, read_rides(file), file)
+
+
+def make_ground(
+    outlines: str | None,
+    plate_property: str,
+    edges: str,
+    within_km: float,
+    crust_age: str | None,
+    latitudes: str,
+) -> Ground | None:
+    """Outlines and crustal ages as the options name them; None if they name neither."""
+    if outlines is None and within_km > 0.0:
+        raise click.UsageError("--within-km needs --outlines")
+    if outlines is None and crust_age is None:
+        return None
+    from restore.files.rasters import read_field
+    from restore.motion.ground import Ground
+    from restore.outlines import Outlines
+
+    crust = None
+    if crust_age is not None:
+        file, _, variable = crust_age.partition(":")
+        crust = read_field(file, variable or None)
+    drawn = None if outlines is None else Outlines.read(outlines, plate_property, edges, latitudes)
+    return Ground(drawn, crust, within_km)
 
 
 def history_inputs(path: str, history: History) -> list[str]:

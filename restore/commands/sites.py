@@ -14,11 +14,13 @@ from restore.commands.options import (
     history_inputs,
     history_option,
     layout_options,
+    make_ground,
     make_layout,
     one_clock,
     progress,
     radius_option,
     read_history,
+    riding,
     say_counts,
     say_findings,
 )
@@ -33,6 +35,15 @@ FRAME_KINDS = ("plate", "mantle", "spin-axis")
 @click.option("--frame-kind", type=click.Choice(FRAME_KINDS), help="Kind of the frame, if the history"
               " does not say.")  # fmt: skip
 @click.option("--ages", type=Ages(), default="own", show_default=True, help="own, 0,10,20 or 0:120:10.")
+@click.option("--outlines", metavar="FILE", help="Plates' outlines: labels for sites without one.")
+@click.option("--plate-property", default="plate", show_default=True, help="The property that holds it.")
+@click.option("--edges", type=click.Choice(["great-circle", "straight"]), default="great-circle",
+              show_default=True, help="What the outlines' edges are.")  # fmt: skip
+@click.option("--within-km", type=click.FloatRange(min=0), default=0.0, show_default=True,
+              help="Sites on no outline go to the nearest one within this distance.")  # fmt: skip
+@click.option("--crust-age", metavar="FILE[:VARIABLE]", help="A grid of crustal ages, Ma, for host ages.")
+@click.option("--rides", metavar="FILE", help="Pieces that rode on other plates: plate,rides_on,"
+              "youngest_ma,oldest_ma.")  # fmt: skip
 @click.option("--time-scale", metavar="SCALE", help="The one clock of the run; ages of tables that name"
               " another are restated to it.")  # fmt: skip
 @click.option("--table-time-scale", metavar="SCALE", help="The clock of the ages in TABLE.")
@@ -51,6 +62,12 @@ def sites(
     frame: str,
     frame_kind: str | None,
     ages: tuple[float, ...] | None,
+    outlines: str | None,
+    plate_property: str,
+    edges: str,
+    within_km: float,
+    crust_age: str | None,
+    rides: str | None,
     time_scale: str | None,
     table_time_scale: str | None,
     out: str | None,
@@ -76,6 +93,8 @@ def sites(
     from restore.scenario.provenance import provenance
 
     history, clock = one_clock(read_history(history_file), time_scale, table_time_scale)
+    history = riding(history, rides)
+    ground = make_ground(outlines, plate_property, edges, within_km, crust_age, latitudes)
     job = SiteJob(
         Circuit(history, frame, beyond),
         ages,
@@ -85,6 +104,7 @@ def sites(
         default_threads(),
         None if draws is None else Draws(draws, seed),
         clock,
+        ground,
     )
     settings: dict[str, Any] = {
         "frame": frame,
@@ -96,7 +116,12 @@ def sites(
     }
     if clock is not None:
         settings |= {"time_scale": clock.to.name, "table_time_scale": table_time_scale}
-    trail = provenance([table, *history_inputs(history_file, history)], settings)
+    inputs = [table, *history_inputs(history_file, history)]
+    if ground is not None:
+        named = {"outlines": outlines, "edges": edges, "within_km": within_km, "crust_age": crust_age}
+        settings |= named
+        inputs += [file for file in (outlines, crust_age and crust_age.partition(":")[0]) if file]
+    trail = provenance(inputs, settings)
     with progress(table, out) as advance:
         done = restore_file(
             table, job, make_layout(**layout), out, ledger_file, trail, say_findings, advance

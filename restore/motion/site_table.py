@@ -30,6 +30,11 @@ NUMBERS = (
 AGES = ("age_ma", "age_young_ma", "age_old_ma", "host_age_ma")
 PLACES = ("lat_deg", "lon_deg", "position_sigma_km")
 ERRORS = ("age_sigma_myr", "position_sigma_km")
+RELATIONS = (
+    "a range needs both its ends",
+    "must not be above age_old_ma",
+    "must lie between age_young_ma and age_old_ma",
+)
 KNOWN_COLUMNS = ("site", *NUMBERS, "plate", "chron", "chron_fraction")
 
 
@@ -39,7 +44,8 @@ class SiteTable:
 
     `numbers`: parsed columns in degrees, Ma, Myr and km, NaN where there is no value. `bad_place`,
     `bad_age`: rows whose coordinates or ages cannot be used. `ranged`: rows with an age range.
-    `findings`: one per fault, with its place.
+    `findings`: one per fault, with its place. `slipped`: rows of another length than the header,
+    whose values stand in the wrong columns.
     """
 
     own: dict[str, Sequence[Any]]
@@ -54,6 +60,7 @@ class SiteTable:
     lines: Sequence[int] = ()
     plate_column: int | None = None
     header_line: int | None = None
+    slipped: frozenset[int] = frozenset()
 
     def plate_place(self, row: int) -> Place:
         """Where the plate label of a row stands."""
@@ -109,7 +116,9 @@ class SiteReader:
         findings: list[Finding] = []
         count = len(chunk)
         bad = {"place": np.zeros(count, dtype=bool), "age": np.zeros(count, dtype=bool)}
-        for row in (*chunk.surplus, *chunk.short):
+        slipped = frozenset((*chunk.surplus, *chunk.short))
+        said: dict[str, NDArray[np.bool_]] = {}
+        for row in slipped:
             wrong_length = self.reader.length_fault(chunk, row)
             if wrong_length is not None:
                 findings.append(wrong_length)
@@ -117,18 +126,22 @@ class SiteReader:
         for name in NUMBERS:
             values, faults = parse_numbers(chunk, self.at[name], name, decimal)
             numbers[name] = np.array(values, dtype=np.float64)
+            # in a row of another length the values have slipped into other columns
+            said[name] = (
+                np.isin(np.arange(count), list(slipped)) if slipped else np.zeros(count, dtype=bool)
+            )
             if faults:
                 row_of = {line: row for row, line in enumerate(chunk.lines)}
                 group = "place" if name in PLACES else "age"
                 for fault in faults:
                     row = row_of[fault.place.line or 0]
                     bad[group][row] = True
-                    # in a row of another length the values have slipped into other columns
-                    if row not in chunk.surplus and row not in chunk.short:
+                    if not said[name][row]:
                         findings.append(fault)
+                    said[name][row] = True
         if self.clock is not None:
             self.clock.restate(chunk, self.at, numbers, bad["age"], findings)
-        self._check_ranges(chunk, numbers, bad, findings)
+        self._check_ranges(chunk, numbers, bad, said, findings)
         labels = self.at["plate"]
         plate = [""] * count if labels is None else [text.strip() for text in chunk.columns[labels]]
         names = self.at["site"]
@@ -148,6 +161,7 @@ class SiteReader:
             chunk.lines,
             labels,
             self.reader.header_line,
+            slipped,
         )
 
     def _check_ranges(
@@ -155,15 +169,19 @@ class SiteReader:
         chunk: Chunk,
         numbers: Mapping[str, Floats],
         bad: Mapping[str, NDArray[np.bool_]],
+        said: Mapping[str, NDArray[np.bool_]],
         findings: list[Finding],
     ) -> None:
         for group, name, wrong, rule in range_faults(numbers):
-            fresh = wrong & ~bad[group]
+            # what two values are to each other is of interest only if each is good
+            fresh = wrong & ~(bad[group] if rule in RELATIONS else said[name])
             bad[group][fresh] = True
             for row in np.flatnonzero(fresh):
-                column = self.at[name]
+                column, value = self.at[name], numbers[name][row]
                 text = "" if column is None else chunk.columns[column][row].strip()
-                what = f"{name} = {text}" if text else f"{name} is empty"
+                what = f"{name} = {text or format(value, 'g')}"
+                if not text and np.isnan(value):
+                    what = f"{name} is empty"
                 place = chunk.place(int(row), self.at[name])
                 findings.append(Finding("error", "bad value", place, what, remedy=rule))
 
@@ -185,13 +203,12 @@ def range_faults(numbers: Mapping[str, Floats]) -> list[tuple[str, str, NDArray[
         )
     young, old = numbers["age_young_ma"], numbers["age_old_ma"]
     half = np.isnan(young) != np.isnan(old)
-    faults.append(("age", "age_young_ma", half & np.isnan(young), "a range needs both its ends"))
-    faults.append(("age", "age_old_ma", half & np.isnan(old), "a range needs both its ends"))
-    rule = "age_young_ma must not be above age_old_ma"
-    faults.append(("age", "age_young_ma", young > old, rule))
+    both, ordered, within = RELATIONS
+    faults.append(("age", "age_young_ma", half & np.isnan(young), both))
+    faults.append(("age", "age_old_ma", half & np.isnan(old), both))
+    faults.append(("age", "age_young_ma", young > old, ordered))
     age = numbers["age_ma"]
-    outside = (age < young) | (age > old)
-    faults.append(("age", "age_ma", outside, "must lie between age_young_ma and age_old_ma"))
+    faults.append(("age", "age_ma", (age < young) | (age > old), within))
     return faults
 
 

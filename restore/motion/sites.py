@@ -21,6 +21,7 @@ from restore.history.ledger import Ledger, segments_of
 from restore.history.store import History
 from restore.motion.ages import parse_ages
 from restore.motion.draws import Draws, drawn_columns
+from restore.motion.ground import Ground, Placing
 from restore.motion.paths import path_length_km
 from restore.motion.points import Moved, Points, move_common, move_own
 from restore.motion.site_clock import SiteClock
@@ -57,6 +58,7 @@ class SiteJob:
     threads: int = 1
     draws: Draws | None = None
     clock: SiteClock | None = None
+    ground: Ground | None = None
 
     @property
     def with_errors(self) -> bool:
@@ -168,15 +170,23 @@ class _Restoring:
         self.findings = list(table.findings)
         self.own_ages = job.ages is None
         self.age = table.representative_age()
-        known = sorted(set(table.plate) - {""})
+        self.placing = Placing.as_given(table) if job.ground is None else job.ground.place(table)
+        self.findings += self.placing.findings
+        self.plate = self.placing.plate
+        known = sorted(set(self.plate) - {""})
         number = dict(zip(known, self.circuit.codes(known).tolist(), strict=True))
-        self.codes = np.array([number.get(p, -1) for p in table.plate], dtype=np.int64)
+        self.codes = np.array([number.get(p, -1) for p in self.plate], dtype=np.int64)
         self._report_unknown([p for p in known if number[p] < 0])
         self.fault = self._faults_of_rows()
 
     def _report_unknown(self, labels: list[str]) -> None:
-        for label in labels:
-            rows = [i for i, plate in enumerate(self.table.plate) if plate == label]
+        rows_of: dict[str, list[int]] = {label: [] for label in labels}
+        for row, plate in enumerate(self.plate) if labels else ():
+            if plate in rows_of and row not in self.table.slipped:
+                rows_of[plate].append(row)
+        for label, rows in rows_of.items():
+            if not rows:
+                continue
             hint = did_you_mean(label, self.circuit.plates)
             more = f" ({len(rows)} sites)" if len(rows) > 1 else ""
             what = f"plate {label!r} is not in the history{more}"
@@ -187,9 +197,8 @@ class _Restoring:
         """The status of rows that cannot be restored whatever the age, REACHED for the others."""
         table = self.table
         fault = np.full(len(table), REACHED, dtype=np.int8)
-        fault[[not plate for plate in table.plate]] = NO_PLATE
-        host = table.numbers["host_age_ma"]
-        fault[self.age > host] = OLDER_THAN_CRUST
+        fault[[not plate for plate in self.plate]] = NO_PLATE
+        fault[self.age > self.placing.host_ma] = OLDER_THAN_CRUST
         if self.own_ages:
             fault[np.isnan(self.age)] = NO_AGE
         fault[table.bad_age] = NO_AGE
@@ -222,15 +231,15 @@ class _Restoring:
             asked = np.where(self.fault == REACHED, self.age, np.nan)
             moved = move_own(self.circuit, self._points(), asked, job.with_errors, threads)
             repeat, fault = 1, self.fault
-            fault = np.where((fault == REACHED) & (asked > self._host()), NOT_FORMED, fault)
         else:
             ages = np.array(job.ages)
             moved = _flat(move_common(self.circuit, self._points(), ages, job.with_errors, threads))
             repeat = len(ages)
             asked = np.tile(ages, count)
             fault = np.repeat(self.fault, repeat)
-            host = np.repeat(self._host(), repeat)
-            fault = np.where((fault == REACHED) & (asked > host), NOT_FORMED, fault)
+        host, gone = (np.repeat(a, repeat) for a in (self.placing.host_ma, self.placing.youngest_ma))
+        fault = np.where((fault == REACHED) & (asked > host), NOT_FORMED, fault)
+        fault = np.where((fault == REACHED) & (asked < gone), NO_PLATE, fault)
         status = np.where(fault != REACHED, fault, moved.status).astype(np.int8)
         results = self._result_columns(moved, asked, status, repeat)
         if self.own_ages and self.table.has_ranges:
@@ -252,23 +261,20 @@ class _Restoring:
             np.repeat(self.table.numbers["lon_deg"], repeat),
         )
 
-    def _host(self) -> Floats:
-        host = self.table.numbers["host_age_ma"]
-        return np.where(np.isnan(host), np.inf, host)
-
     def _own_columns(self, results: Mapping[str, Any], repeat: int) -> dict[str, Any]:
         table = self.table
         names, taken = list(table.own), [*results, "plate_from"]
         if table.plate_column is not None and names[table.plate_column] != "plate":
             taken.append("plate")
         refuse_result_names(names, taken, table.file, table.header_line)
-        columns = {
+        columns: dict[str, Any] = {
             name: [value for value in column for _ in range(repeat)] if repeat > 1 else column
             for name, column in self.table.own.items()
         }
-        plates = [plate for plate in self.table.plate for _ in range(repeat)]
-        columns["plate"] = plates
-        columns["plate_from"] = ["given" if plate else "" for plate in plates]
+        columns["plate"] = [plate for plate in self.plate for _ in range(repeat)]
+        columns["plate_from"] = [origin for origin in self.placing.plate_from for _ in range(repeat)]
+        if self.placing.distance_km is not None:
+            columns["outline_distance_km"] = np.repeat(self.placing.distance_km, repeat)
         return columns
 
     def _result_columns(
@@ -317,7 +323,7 @@ class _Restoring:
         points = self._points(rows)
         numbers = self.table.numbers
         young, old = numbers["age_young_ma"][rows], numbers["age_old_ma"][rows]
-        host = self._host()[rows]
+        host = self.placing.host_ma[rows]
         for name, ages in (("young", young), ("old", old)):
             moved = move_own(self.circuit, points, ages)
             here = moved.status == REACHED
@@ -362,6 +368,10 @@ class _Restoring:
             older = self.table.numbers["age_old_ma"]
             limit = np.where(np.isnan(np.repeat(older, repeat)), age, np.repeat(older, repeat))
             remarks[(limit < asked) & (status == REACHED)] = "sample is younger than the asked age"
+        for row, remark in enumerate(self.placing.remark):
+            if remark:
+                some = slice(row * repeat, (row + 1) * repeat)
+                remarks[some] = [f"{said}; {remark}" if said else remark for said in remarks[some]]
         results["restored_note"] = remarks.tolist()
         for name, value in (
             ("frame", self.circuit.frame),

@@ -6,6 +6,7 @@ import math
 import os
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -27,7 +28,7 @@ class Outline:
     """A plate's outline: its polygons and the ages, Ma, between which the plate is there.
 
     `rank`: where outlines overlap the lowest is taken, among equals the first in the file.
-    `number`: of the feature in the file, from 1.
+    `number`: of the feature in the file, from 1; `repeated`: neighbouring vertices there that are one.
     """
 
     plate: str
@@ -36,6 +37,7 @@ class Outline:
     youngest_ma: float = 0.0
     rank: int = 0
     number: int = 0
+    repeated: int = 0
 
     def area_sr(self) -> float:
         """Area in steradians."""
@@ -158,6 +160,9 @@ def _outline(feature: Feature, plate_property: str, edges: str, latitudes: Latit
         raise InputError(f"{feature}: geometry {kind!r}: an outline is a Polygon or a MultiPolygon")
     parts = geometry["coordinates"] if kind == "MultiPolygon" else [geometry["coordinates"]]
     polygons = tuple(_polygon(feature, part, edges, latitudes) for part in parts)
+    repeated = sum(
+        list(one[:2]) == list(other[:2]) for part in parts for ring in part for one, other in pairwise(ring)
+    )
     rank = properties.get("rank", 0)
     if not isinstance(rank, (int, np.integer)) or isinstance(rank, bool):
         raise InputError(f"{feature}: rank = {rank!r}: must be a whole number")
@@ -165,7 +170,7 @@ def _outline(feature: Feature, plate_property: str, edges: str, latitudes: Latit
     youngest = _age(feature, properties, "youngest_ma", 0.0)
     if youngest > oldest:
         raise InputError(f"{feature}: youngest_ma = {youngest:g} is above oldest_ma = {oldest:g}")
-    return Outline(str(label), polygons, oldest, youngest, int(rank), feature.number)
+    return Outline(str(label), polygons, oldest, youngest, int(rank), feature.number, repeated)
 
 
 def _age(feature: Feature, properties: Mapping[str, Any], name: str, default: float) -> float:
