@@ -108,6 +108,9 @@ kind = "mantle"
 [conventions]
 latitudes = "as-given"
 
+[outlines]
+file = "outlines.geojson"
+
 [[task]]
 name = "cores"
 kind = "sites"

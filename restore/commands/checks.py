@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -15,8 +16,11 @@ if TYPE_CHECKING:
     from restore.history.store import History
 
 
+OUTLINE_ENDINGS = frozenset({".geojson", ".gpkg", ".shp", ".geoparquet"})
+
+
 @click.command()
-@click.argument("file", metavar="HISTORY|SCENARIO")
+@click.argument("file", metavar="HISTORY|SCENARIO|OUTLINES")
 @click.option("--json", "as_json", is_flag=True, help="Print the findings as JSON.")
 @click.option(
     "--rows/--no-rows", "rows", default=None, help="Print what was read, to hold against the paper"
@@ -25,7 +29,7 @@ if TYPE_CHECKING:
 @click.option("--out", metavar="FILE.nc", help="Write the history as one netCDF file, if it has no error.")
 @debug_option
 def check(file: str, as_json: bool, rows: bool | None, out: str | None) -> int:
-    """Say what is wrong or doubtful in a history or a scenario; exit 1 if anything is an error.
+    """Say what is wrong or doubtful in a history, a scenario or outlines; exit 1 if anything is an error.
 
     \b
     oncewhere check scenario_files/history.toml --out history.nc
@@ -56,29 +60,46 @@ def _summary(findings: list[Finding]) -> str:
 
 def _audited(file: str) -> tuple[list[Finding], History | None]:
     """The findings of a file, and the history if it can be read at all."""
-    from restore.findings import Finding, Place
     from restore.history.audit import audit
     from restore.history.store import History
+    from restore.outlines import Outlines
+    from restore.outlines.audit import audit_outlines
 
     try:
         if Path(file).suffix.lower() == ".toml" and _is_scenario(file):
             from restore.scenario.faults import clock_faults, label_faults
+            from restore.scenario.inputs import ground_of, read_scenario_history
             from restore.scenario.schema import read_scenario
 
             scenario = read_scenario(file)
-            history = History.read(scenario.history_file)
+            history = read_scenario_history(scenario)
             faults = [*label_faults(scenario, history), *clock_faults(scenario, history)]
-            return faults or audit(history, scenario.root.frame.name), history
+            if faults:
+                return faults, history
+            ground = ground_of(scenario)
+            findings = audit(history, scenario.root.frame.name)
+            if ground is not None and ground.outlines is not None:
+                findings += audit_outlines(ground.outlines, history)
+            return findings, history
+        if Path(file).suffix.lower() in OUTLINE_ENDINGS:
+            return audit_outlines(Outlines.read(file)), None
         history = History.read(file)
         return audit(history), history
     except OncewhereError as exc:
         if exc.findings:
             return list(exc.findings), None
-        return [Finding("error", "unreadable", Place(file), _without(str(exc), file))], None
+        return [_unreadable(line, file) for line in str(exc).splitlines()], None
 
 
-def _without(message: str, file: str) -> str:
-    return message.removeprefix(f"{file}: ")
+def _unreadable(message: str, file: str) -> Finding:
+    """An error that is no finding yet; its message begins with its place, if it has one."""
+    from restore.findings import Finding, Place
+
+    found = re.match(r"(?P<file>[^:]+)(:(?P<line>\d+))?(:(?P<column>\d+))?: ", message)
+    if found is None or (found["line"] is None and found["file"] != file):
+        return Finding("error", "unreadable", Place(file), message)
+    line, column = (None if number is None else int(number) for number in found.group("line", "column"))
+    return Finding("error", "unreadable", Place(found["file"], line, column), message[found.end() :])
 
 
 def _is_scenario(file: str) -> bool:

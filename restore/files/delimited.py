@@ -254,7 +254,13 @@ class DelimitedReader:
         if not self.layout.header:
             return f"no column is named for {ours}; a table without a header is mapped by number"
         if len(self.header) == 1:
-            for mark, name in ((";", "semicolon"), ("\t", "tab"), ("|", "bar"), (" ", "whitespace")):
+            for mark, name in (
+                (";", "semicolon"),
+                ("\t", "tab"),
+                ("|", "bar"),
+                (",", "comma"),
+                (" ", "whitespace"),
+            ):
                 if mark in self.header[0]:
                     shown = self.header[0][:LONGEST_SHOWN]
                     shown += "..." if shown != self.header[0] else ""

@@ -198,14 +198,15 @@ class Circuit:
         """The spans of age (younger, older), Ma, in which the plate has a chain to the frame."""
         self._check_label(plate)
         has = self.pieces.chain_of[self._code[plate]] != NO_CHAIN
-        spans: list[tuple[float, float]] = []
-        for at, cut in enumerate(self.pieces.cuts):
-            if has[2 * at + 1]:
-                if at and has[2 * at] and spans:
-                    spans[-1] = (spans[-1][0], float(cut))
-                else:
-                    spans.append((float(cut), float(cut)))
-        return spans
+        at_cuts = np.flatnonzero(has[1::2])
+        if not len(at_cuts):
+            return []
+        begins = ~has[2 * at_cuts]
+        begins[0] = True
+        starts = at_cuts[begins]
+        ends = at_cuts[np.append(np.flatnonzero(begins)[1:], len(at_cuts)) - 1]
+        cuts = self.pieces.cuts
+        return [(float(cuts[i]), float(cuts[j])) for i, j in zip(starts, ends, strict=True)]
 
     def say(self, plate: str, chain: Chain) -> str:
         """A chain in words: the plates from one end to the other."""

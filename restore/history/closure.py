@@ -73,7 +73,7 @@ def closure(history: History, plates: Sequence[str], ages: ArrayLike) -> Closure
                 f"{pair.plate} relative to {pair.relative_to} at {age[outside][0]:g} Ma: the pair holds at"
                 f" {pair.youngest_ma:g}..{pair.oldest_ma:g} Ma"
             )
-    found = _along(circuit, chain, age)
+    found = along(circuit, chain, age)
     sensitivity, errors = found.sensitivity(), history.row_errors()
     return Closure(
         loop, age, found.rotations, sensitivity.covariance(errors), sensitivity.effective_dof(errors)
@@ -95,7 +95,7 @@ def _link(circuit: Circuit, one: str, other: str) -> Link:
     return best
 
 
-def _along(circuit: Circuit, chain: Chain, ages: Floats) -> CircuitRotations:
+def along(circuit: Circuit, chain: Chain, ages: Floats) -> CircuitRotations:
     """The rotations along any chain of pairs, one that leads back to its start included."""
     wider = copy.copy(circuit)
     wider.pieces = replace(circuit.pieces, chains=(*circuit.pieces.chains, chain))

@@ -7,8 +7,7 @@ have no other link.
 
 from __future__ import annotations
 
-from collections import deque
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -48,7 +47,7 @@ class Pieces:
     closings: tuple[Conflict, ...]
 
     def piece(self, ages: Floats) -> NDArray[np.int64]:
-        """The piece in which each age lies."""
+        """The piece in which each age (Ma) lies."""
         right = np.searchsorted(self.cuts, ages, side="left")
         at_cut = np.zeros(ages.shape, dtype=bool)
         inside = right < len(self.cuts)
@@ -92,9 +91,8 @@ def cut_time(
     """
     code = {plate: i for i, plate in enumerate(plates)}
     cuts = np.unique([age for pair in pairs for age in (pair.youngest_ma, pair.oldest_ma)])
-    builder = _TreeBuilder(pairs, code, code[frame], misfit, tolerance_rad)
-    columns = np.full((len(plates), 2 * len(cuts) + 1), NO_CHAIN, dtype=np.int32)
-    before: tuple[int, ...] = ()
+    builder = _ChainBuilder(pairs, code, code[frame], misfit, tolerance_rad)
+    rows = np.full((2 * len(cuts) + 1, len(plates)), NO_CHAIN, dtype=np.int32)
     starting: dict[float, list[int]] = {}
     ending: dict[float, list[int]] = {}
     for i, pair in enumerate(pairs):
@@ -102,17 +100,141 @@ def cut_time(
         ending.setdefault(pair.oldest_ma, []).append(i)
     for i, cut in enumerate(cuts):
         older_end = float(cuts[i + 1]) if i + 1 < len(cuts) else float(cut)
-        begun = starting.get(float(cut), [])
-        columns[:, 2 * i + 1] = builder.tree(before, tuple(begun), float(cut), float(cut))
-        ended = set(ending.get(float(cut), []))
-        before = tuple(sorted((set(before) | set(begun)) - ended))
-        columns[:, 2 * i + 2] = builder.tree(before, (), float(cut), older_end)
-    columns[:, 0] = builder.tree((), (), 0.0, 0.0)
+        begun, ended = starting.get(float(cut), []), ending.get(float(cut), [])
+        builder.forest.fill_in(begun)
+        rows[2 * i + 1] = builder.numbers(float(cut), float(cut))
+        builder.forest.change(begun, ended)
+        rows[2 * i + 2] = builder.numbers(float(cut), older_end)
+    rows[0, code[frame]] = builder.number_of(())
+    columns = np.ascontiguousarray(rows.T)
     return Pieces(cuts, columns, tuple(builder.chains), tuple(builder.conflicts), tuple(builder.closings))
 
 
-class _TreeBuilder:
-    """Builds the tree of links to the frame for one piece after another, sharing equal chains."""
+class _Forest:
+    """The spanning forest of lowest rank over the pairs that hold, followed from piece to piece.
+
+    Pairs are ordered by rank, then by number; with a strict order there is one such forest (Kruskal
+    1956), whatever the order of the changes, so that only what changes costs time. The frame is at
+    the top of its tree. `above`: node -> (pair, node above it); `moved`: nodes that were hung
+    elsewhere since this was last emptied; `spare`: pairs that hold and are not needed.
+    """
+
+    def __init__(self, ends: list[tuple[int, int]], ranks: list[int], nodes: int, root: int) -> None:
+        self.ends = ends
+        self.root = root
+        self.order = [(0, rank, pair) for pair, rank in enumerate(ranks)]
+        self.above: list[tuple[int, int] | None] = [None] * nodes
+        self.below: list[set[int]] = [set() for _ in range(nodes)]
+        self.moved: set[int] = set()
+        self.spare: set[int] = set()
+
+    def fill_in(self, begun: list[int]) -> None:
+        """Pairs that only begin here serve nodes that no other pair ties."""
+        for pair in begun:
+            self.order[pair] = (1, *self.order[pair][1:])
+        for pair in sorted(begun, key=self.order.__getitem__):
+            one, other = self.ends[pair]
+            if self._top(one) != self._top(other):
+                self._tie(pair)
+
+    def change(self, begun: list[int], ended: list[int]) -> None:
+        """From now on pairs that began hold like any other, and those that ended do not."""
+        for pair in begun:
+            self.order[pair] = (0, *self.order[pair][1:])
+        for pair in begun:
+            if self.lower_end(pair) is None:
+                self._insert(pair)
+        for pair in ended:
+            self._remove(pair)
+
+    def lower_end(self, pair: int) -> int | None:
+        """The node that a pair of the forest ties to the one above it; None if it is not needed."""
+        for node, other in (self.ends[pair], self.ends[pair][::-1]):
+            if self.above[node] == (pair, other):
+                return node
+        return None
+
+    def under(self, nodes: Iterable[int]) -> set[int]:
+        """Nodes with all that hang under them."""
+        found: set[int] = set()
+        waiting = list(nodes)
+        while waiting:
+            node = waiting.pop()
+            if node not in found:
+                found.add(node)
+                waiting.extend(self.below[node])
+        return found
+
+    def _top(self, node: int) -> int:
+        while (above := self.above[node]) is not None:
+            node = above[1]
+        return node
+
+    def _insert(self, pair: int) -> None:
+        one, other = self.ends[pair]
+        if self._top(one) != self._top(other):
+            self._tie(pair)
+            return
+        last = max(self._between(one, other), key=self.order.__getitem__)
+        if self.order[pair] < self.order[last]:
+            self._cut(last)
+            self._tie(pair)
+            self.spare.add(last)
+        else:
+            self.spare.add(pair)
+
+    def _remove(self, pair: int) -> None:
+        self.spare.discard(pair)
+        if self.lower_end(pair) is None:
+            return
+        self._cut(pair)
+        bridges = [p for p in self.spare if len({self._top(node) for node in self.ends[p]}) == 2]
+        if bridges:
+            best = min(bridges, key=self.order.__getitem__)
+            self.spare.remove(best)
+            self._tie(best)
+
+    def _between(self, one: int, other: int) -> list[int]:
+        """The pairs on the way between two nodes of one tree."""
+        ways: list[list[int]] = [[], []]
+        for way, node in zip(ways, (one, other), strict=True):
+            while (above := self.above[node]) is not None:
+                way.append(above[0])
+                node = above[1]
+        while ways[0] and ways[1] and ways[0][-1] == ways[1][-1]:
+            for way in ways:
+                way.pop()
+        return ways[0] + ways[1]
+
+    def _tie(self, pair: int) -> None:
+        """Hang the tree of one end, turned over, under the other end."""
+        upper, lower = self.ends[pair]
+        if self._top(lower) == self.root:
+            upper, lower = lower, upper
+        here, node = (pair, upper), lower
+        while True:
+            before = self.above[node]
+            if before is not None:
+                self.below[before[1]].remove(node)
+            self.above[node] = here
+            self.below[here[1]].add(node)
+            self.moved.add(node)
+            if before is None:
+                return
+            here, node = (before[0], node), before[1]
+
+    def _cut(self, pair: int) -> None:
+        node = self.lower_end(pair)
+        assert node is not None
+        above = self.above[node]
+        assert above is not None
+        self.below[above[1]].remove(node)
+        self.above[node] = None
+        self.moved.add(node)
+
+
+class _ChainBuilder:
+    """Numbers the chains to the frame in one piece after another, sharing equal ones."""
 
     def __init__(
         self,
@@ -125,79 +247,88 @@ class _TreeBuilder:
         self.pairs = pairs
         self.names = list(code)
         self.ends = [(code[pair.plate], code[pair.relative_to]) for pair in pairs]
-        self.root = root
+        self.forest = _Forest(self.ends, [pair.rank for pair in pairs], len(code), root)
+        self.forest.moved.add(root)
         self.misfit = misfit
         self.tolerance = tolerance_rad
         self.chains: list[Chain] = []
-        self.number: dict[Chain, int] = {}
+        self.known: dict[Chain, int] = {}
+        self.chain_to: list[Chain | None] = [None] * len(code)
+        self.column = np.full(len(code), NO_CHAIN, dtype=np.int32)
+        self.waiting: set[int] = set()
         self.conflicts: list[Conflict] = []
         self.closings: list[Conflict] = []
 
-    def _chain_number(self, chain: Chain) -> int:
-        if chain not in self.number:
-            self.number[chain] = len(self.chains)
+    def number_of(self, chain: Chain) -> int:
+        """The number of a chain, a new one if it has none."""
+        if chain not in self.known:
+            self.known[chain] = len(self.chains)
             self.chains.append(chain)
-        return self.number[chain]
+        return self.known[chain]
 
-    def tree(
-        self, active: tuple[int, ...], begun: tuple[int, ...], younger: float, older: float
-    ) -> NDArray[np.int32]:
-        """Chain numbers (plates,) with the pairs in `active`; those in `begun` only fill in."""
-        result = np.full(len(self.names), NO_CHAIN, dtype=np.int32)
-        used, spare = self._spanning(active, begun)
-        neighbours: dict[int, list[tuple[int, int, bool]]] = {}
-        for pair in used:
-            plate, partner = self.ends[pair]
-            neighbours.setdefault(partner, []).append((plate, pair, True))
-            neighbours.setdefault(plate, []).append((partner, pair, False))
-        chain_to: dict[int, Chain] = {self.root: ()}
-        queue = deque([self.root])
-        while queue:
-            here = queue.popleft()
-            for there, pair, forward in neighbours.get(here, ()):
-                if there not in chain_to:
-                    chain_to[there] = (Link(pair, forward), *chain_to[here])
-                    queue.append(there)
-        doubtful = self._doubtful_pairs(spare, chain_to, younger, older)
-        for plate, chain in chain_to.items():
-            if doubtful and any(link.pair in doubtful for link in chain):
-                result[plate] = AMBIGUOUS
+    def numbers(self, younger: float, older: float) -> NDArray[np.int32]:
+        """Chain numbers (plates,) in the piece between two ages."""
+        changed = self._follow()
+        hidden: set[int] = set()
+        if self.forest.spare:
+            lower = [self.forest.lower_end(p) for p in self._doubtful_pairs(younger, older)]
+            hidden = self.forest.under(node for node in lower if node is not None)
+        todo = changed | self.waiting
+        self.waiting = {node for node in todo & hidden if self.chain_to[node] is not None}
+        fresh = []
+        for node in todo:
+            chain = self.chain_to[node]
+            if chain is None or node in hidden:
+                self.column[node] = NO_CHAIN
+            elif chain in self.known:
+                self.column[node] = self.known[chain]
             else:
-                result[plate] = self._chain_number(chain)
-        return result
+                fresh.append((len(chain), self._place(chain), node, chain))
+        # numbered from the frame outwards, so that the numbers do not depend on what changed
+        for *_, node, chain in sorted(fresh):
+            self.column[node] = self.number_of(chain)
+        if not hidden:
+            return self.column
+        shown = self.column.copy()
+        shown[list(hidden)] = AMBIGUOUS
+        return shown
 
-    def _spanning(self, active: tuple[int, ...], begun: tuple[int, ...]) -> tuple[list[int], list[int]]:
-        """Pairs of a spanning forest, lowest rank first (Kruskal 1956), and the ones left over."""
-        group = list(range(len(self.names)))
+    def _place(self, chain: Chain) -> list[tuple[int, int, int]]:
+        return [self.forest.order[link.pair] for link in reversed(chain)]
 
-        def leader(node: int) -> int:
-            while group[node] != node:
-                group[node] = group[group[node]]
-                node = group[node]
-            return node
+    def _follow(self) -> set[int]:
+        """Bring the chains up to date with the forest; returns the nodes whose chain may be new."""
+        above = self.forest.above
+        changed = self.forest.under(self.forest.moved)
+        self.forest.moved.clear()
+        for start in changed:
+            over = above[start]
+            if over is not None and over[1] in changed:
+                continue
+            waiting = [start]
+            while waiting:
+                node = waiting.pop()
+                self.chain_to[node] = self._chain(node)
+                waiting.extend(self.forest.below[node])
+        return changed
 
-        used, spare = [], []
-        for late, members in ((False, active), (True, begun)):
-            for pair in sorted(members, key=lambda p: (self.pairs[p].rank, p)):
-                one, other = (leader(end) for end in self.ends[pair])
-                if one != other:
-                    group[one] = other
-                    used.append(pair)
-                elif not late:
-                    spare.append(pair)
-        return used, spare
+    def _chain(self, node: int) -> Chain | None:
+        over = self.forest.above[node]
+        if over is None:
+            return () if node == self.forest.root else None
+        pair, partner = over
+        rest = self.chain_to[partner]
+        return None if rest is None else (Link(pair, self.ends[pair][0] == node), *rest)
 
-    def _doubtful_pairs(
-        self, spare: list[int], chain_to: dict[int, Chain], younger: float, older: float
-    ) -> set[int]:
+    def _doubtful_pairs(self, younger: float, older: float) -> set[int]:
         """Pairs on loops that do not close and that no rank decides."""
         doubtful: set[int] = set()
-        for pair in spare:
+        for pair in sorted(self.forest.spare, key=self.forest.order.__getitem__):
             plate, partner = self.ends[pair]
-            if plate not in chain_to or partner not in chain_to:
+            one, rest = self.chain_to[plate], self.chain_to[partner]
+            if one is None or rest is None:
                 continue
-            other: Chain = (Link(pair, True), *chain_to[partner])
-            one = chain_to[plate]
+            other: Chain = (Link(pair, True), *rest)
             while one and other and one[-1] == other[-1]:
                 one, other = one[:-1], other[:-1]
             loop = {link.pair for link in (*one, *other)}

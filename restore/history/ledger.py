@@ -235,7 +235,7 @@ def row_record(circuit: Circuit, number: int) -> dict[str, Any]:
 def segments_of(
     circuit: Circuit, chain: NDArray[np.int32], ages: Floats
 ) -> tuple[NDArray[np.int64], tuple[Segment, ...]]:
-    """The segment (n,) of each chain and age, and the segments; numbered by chain, then by age."""
+    """The segment (n,) of each chain and age (Ma), and the segments; numbered by chain, then by age."""
     segment = np.full(len(chain), NO_SEGMENT, dtype=np.int64)
     segments: list[Segment] = []
     for number in np.unique(chain[chain >= 0]):

@@ -158,7 +158,7 @@ class Step(NamedTuple):
 
 
 def steps_along(stages: Stages, chain: Chain, ages: Floats, just_younger: bool = False) -> Iterator[Step]:
-    """The links of a chain at ages (n,), from the plate outwards.
+    """The links of a chain at ages (n,), Ma, from the plate outwards.
 
     `just_younger` picks, at a row's age, the stage just younger: its velocity is the rate there.
     """
@@ -179,7 +179,7 @@ def steps_along(stages: Stages, chain: Chain, ages: Floats, just_younger: bool =
 
 
 def compose(stages: Stages, chain: Chain, ages: Floats) -> Floats:
-    """Quaternions (n, 4) of a chain at ages (n,): today's position to the one in the frame."""
+    """Quaternions (n, 4) of a chain at ages (n,), Ma: today's position to the one in the frame."""
     total: Floats | None = None
     for step in steps_along(stages, chain, ages):
         total = step.rotation if total is None else so3.multiply(step.rotation, total)

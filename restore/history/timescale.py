@@ -184,7 +184,7 @@ class Restatement:
         return np.where(inside, np.interp(age, self.from_ma, self.to_ma), np.nan)
 
     def loose(self, ages: ArrayLike) -> NDArray[np.bool_]:
-        """Whether an age lies inside an interval without reversals longer than LONG_INTERVAL_MYR."""
+        """Whether an age (Ma) lies inside an interval without reversals longer than LONG_INTERVAL_MYR."""
         age = np.asarray(ages, dtype=np.float64)
         at = np.clip(np.searchsorted(self.from_ma, age, side="right") - 1, 0, len(self.from_ma) - 2)
         long = self.from_ma[at + 1] - self.from_ma[at] > LONG_INTERVAL_MYR

@@ -20,16 +20,18 @@ from restore.geometry.latitudes import Latitudes
 from restore.history.audit import audit
 from restore.history.circuit import Circuit
 from restore.history.ledger import Segment, entries
-from restore.history.redate import one_clock
 from restore.history.store import History
 from restore.history.timescale import TimeScale
 from restore.motion.ages import parse_ages
 from restore.motion.draws import Draws
+from restore.motion.ground import Ground
 from restore.motion.rates import rates
 from restore.motion.site_clock import SiteClock
 from restore.motion.site_files import restore_file
 from restore.motion.sites import SiteJob
+from restore.outlines.audit import audit_outlines
 from restore.scenario.faults import clock_faults, label_faults
+from restore.scenario.inputs import ground_of, on_the_clock, read_scenario_history
 from restore.scenario.provenance import (
     CAUTION,
     command_line,
@@ -73,15 +75,18 @@ def run_scenario(
     the scenario at once, HistoryError for its history, InputError if the folder is there already.
     """
     scenario = read_scenario(path)
-    history = History.read(scenario.history_file)
+    history = read_scenario_history(scenario)
     raise_faults(ScenarioError, [*label_faults(scenario, history), *clock_faults(scenario, history)])
     folder = Path(out) if out is not None else Path(path).with_name(f"{Path(path).stem}-results")
     before = _make_folder(folder, go_on)
     run = Run(folder)
     run.findings += audit(history, scenario.root.frame.name)
+    ground = ground_of(scenario)
+    if ground is not None and ground.outlines is not None:
+        run.findings += audit_outlines(ground.outlines, history)
     history, clock, remarks = on_the_clock(scenario, history)
     run.findings += remarks
-    runner = _Runner(scenario, history, run, threads, before, clock)
+    runner = _Runner(scenario, history, run, threads, before, clock, ground)
     runner.write_record()
     for task in scenario.tasks:
         kept = runner.unchanged(task)
@@ -126,18 +131,6 @@ def _finding(record: Mapping[str, Any]) -> Finding:
     )
 
 
-def on_the_clock(
-    scenario: Scenario, history: History
-) -> tuple[History, TimeScale | None, tuple[Finding, ...]]:
-    """The history restated to the scenario's clock, if it names one."""
-    name = scenario.root.history.time_scale
-    if name is None:
-        return history, None, ()
-    clock = TimeScale.read(name, scenario.folder)
-    done = one_clock(history, clock)
-    return done.history, clock, done.findings
-
-
 class _Runner:
     """Does the tasks of one run and keeps its record."""
 
@@ -149,9 +142,11 @@ class _Runner:
         threads: int,
         before: dict[str, Any],
         clock: TimeScale | None,
+        ground: Ground | None,
     ) -> None:
         self.before = before
         self.clock = clock
+        self.ground = ground
         self.keeps = False
         self.scenario = scenario
         self.history = history
@@ -161,7 +156,10 @@ class _Runner:
         self.circuit = Circuit(history, root.frame.name, root.conventions.beyond)
         self.latitudes = Latitudes(root.conventions.latitudes)
         tables = [] if scenario.history_file.endswith((".nc", ".nc4")) else history.tables
-        self.history_inputs = [scenario.history_file, *(table.file for table in tables)]
+        files = [scenario.history_file, *(table.file for table in tables)]
+        self.history_inputs = [file for file in files if file]
+        parts = (scenario.root.outlines, scenario.root.crust)
+        self.ground_inputs = [scenario.path(part.file) for part in parts if part is not None]
         self.segments: dict[Segment, None] = {}
         self.began = time.time()
 
@@ -172,12 +170,16 @@ class _Runner:
             "frame": root.frame.name,
             "frame_kind": root.frame.kind,
             **root.conventions.model_dump(),
+            "time_scale": root.history.time_scale,
+            "outlines": None if root.outlines is None else root.outlines.model_dump(),
+            "crust": None if root.crust is None else root.crust.model_dump(),
             "task": task.model_dump(),
         }
 
     def inputs(self, task: SitesTask | RatesTask) -> list[str]:
         """The files behind a task."""
-        return [self.scenario.path(task.file), *self.history_inputs]
+        ground = self.ground_inputs if isinstance(task, SitesTask) else []
+        return [self.scenario.path(task.file), *self.history_inputs, *ground]
 
     def unchanged(self, task: SitesTask | RatesTask) -> dict[str, Any] | None:
         """The earlier record of a task that need not be done again."""
@@ -228,6 +230,7 @@ class _Runner:
             self.threads,
             None if task.draws is None else Draws(task.draws, task.seed),
             self._site_clock(task),
+            self.ground,
         )
         name = f"{task.name}.csv"
         table = self.scenario.path(task.file)

@@ -37,6 +37,23 @@ class HistoryPart(_Part):
 
     file: StrictStr
     time_scale: StrictStr | None = None
+    rides: StrictStr | None = None
+
+
+class OutlinesPart(_Part):
+    """The plates' outlines, for sites without a label."""
+
+    file: StrictStr
+    plate_property: StrictStr = "plate"
+    edges: Literal["great-circle", "straight"] = "great-circle"
+    within_km: Annotated[float, Field(ge=0.0, allow_inf_nan=False, strict=True)] = 0.0
+
+
+class CrustPart(_Part):
+    """A grid of crustal ages, Ma, for host ages."""
+
+    file: StrictStr
+    variable: StrictStr | None = None
 
 
 class FramePart(_Part):
@@ -146,6 +163,8 @@ class _Root(_Part):
     history: HistoryPart
     frame: FramePart
     conventions: ConventionsPart = ConventionsPart()
+    outlines: OutlinesPart | None = None
+    crust: CrustPart | None = None
     task: list[dict[str, Any]] = Field(min_length=1)
 
 
@@ -325,8 +344,9 @@ def _check_files(document: TomlDocument, findings: list[Finding]) -> None:
     folder = Path(document.file).parent
     values = document.values
     named: list[tuple[tuple[str | int, ...], Any]] = []
-    if isinstance(values.get("history"), dict):
-        named.append((("history", "file"), values["history"].get("file")))
+    for part, key in (("history", "file"), ("history", "rides"), ("outlines", "file"), ("crust", "file")):
+        if isinstance(values.get(part), dict):
+            named.append(((part, key), values[part].get(key)))
     for index, task in enumerate(_task_values(document)):
         if isinstance(task, dict):
             named.append((("task", index, "file"), task.get("file")))
@@ -337,4 +357,4 @@ def _check_files(document: TomlDocument, findings: list[Finding]) -> None:
         beside = [p.name for p in folder.iterdir() if p.is_file()] if folder.is_dir() else []
         hint = did_you_mean(name, beside)
         remedy = hint if hint.startswith("did") else "names are relative to the scenario's folder"
-        findings.append(_fault(document, path, f"file = {name!r}: {reason}", remedy))
+        findings.append(_fault(document, path, f"{path[-1]} = {name!r}: {reason}", remedy))

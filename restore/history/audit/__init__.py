@@ -11,6 +11,7 @@ from restore.history.store import History
 OF_ROWS = (rows.rows_without_reference, rows.rows_without_covariance, rows.mixed_clocks)
 OF_PAIRS = (
     pairs.slips,
+    pairs.tables_in_radians,
     pairs.stages_too_fast_or_wide,
     pairs.antipodal_poles,
     pairs.rough_velocities,
@@ -38,8 +39,9 @@ def audit(history: History, frame: str | None = None) -> list[Finding]:
         return findings
     for of_rows in OF_ROWS:
         findings += of_rows(history)
+    tracks = pairs.tracks_of(history, pairs_of(history))
     for of_pairs in OF_PAIRS:
-        findings += of_pairs(history, pairs_of(history))
+        findings += of_pairs(history, tracks)
     circuit = Circuit(history, frame or widest_frame(history))
     for of_chains in OF_CHAINS:
         findings += of_chains(circuit)

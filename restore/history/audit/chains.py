@@ -7,53 +7,68 @@ from itertools import pairwise
 import numpy as np
 
 from restore.findings import Finding
-from restore.geometry.rotations import Rotations
 from restore.geometry.sphere import EARTH_RADIUS_KM
-from restore.history import links
+from restore.history.audit.misfits import Misfit, apart_km, nearest_row
 from restore.history.audit.places import pair_name, place_of_row
 from restore.history.circuit import TOLERANCE_KM, Circuit
-from restore.history.links import Chain
+from restore.history.intervals import Conflict
+from restore.history.links import Chain, Link
 
 NEAR_GAP_MYR = 0.5
 """A gap as short as this between two pairs is likely a matter of rounded ages."""
 
 
 def unreached_plates(circuit: Circuit) -> list[Finding]:
-    """Plates from which no chain leads to the frame at any age."""
+    """Plates from which no chain leads to the frame, at any age or past the end of a chain."""
     findings = []
+    oldest: dict[str, tuple[float, int]] = {}
+    for pair in circuit.pairs:
+        own = (pair.oldest_ma, int(pair.rows[-1]))
+        oldest[pair.plate] = max(oldest.get(pair.plate, own), own)
     for plate in circuit.plates:
-        if circuit.covered(plate) or plate == circuit.frame:
+        spans = circuit.covered(plate)
+        if plate == circuit.frame:
             continue
         rows = circuit.history.rows
-        row = int(np.flatnonzero((rows.plate == plate) | (rows.relative_to == plate))[0])
-        what = f"no chain leads from {plate} to {circuit.frame} at any age"
-        remedy = "add a pair that ties it, or ask for another frame"
-        findings.append(
-            Finding("warning", "no chain", place_of_row(circuit.history, row), what, remedy=remedy)
-        )
+        if not spans:
+            row = int(np.flatnonzero((rows.plate == plate) | (rows.relative_to == plate))[0])
+            what = f"no chain leads from {plate} to {circuit.frame} at any age"
+            remedy = "add a pair that ties it, or ask for another frame"
+        elif plate in oldest and oldest[plate][0] > spans[-1][1]:
+            end, row = oldest[plate]
+            what = (
+                f"no chain leads from {plate} to {circuit.frame} between {spans[-1][1]:g} and {end:g} Ma,"
+                f" where {plate} has rows"
+            )
+            remedy = "the chain ends at a partner: add older rows for it"
+        else:
+            continue
+        place = place_of_row(circuit.history, row)
+        findings.append(Finding("warning", "no chain", place, what, remedy=remedy))
     return findings
 
 
 def differing_chains(circuit: Circuit) -> list[Finding]:
     """Loops of pairs that do not close: two chains between the same plates that differ."""
-    findings: dict[tuple[str, Chain, Chain], Finding] = {}
+    worst: dict[tuple[str, Chain, Chain], Conflict] = {}
     for conflict in circuit.pieces.conflicts:
         key = (conflict.plate, conflict.one, conflict.other)
-        km = conflict.misfit_rad * EARTH_RADIUS_KM
-        kept = findings.get(key)
-        if kept is not None and (kept.km or 0.0) >= km:
-            continue
+        if key not in worst or worst[key].misfit_rad < conflict.misfit_rad:
+            worst[key] = conflict
+    findings = []
+    for conflict in worst.values():
+        misfit = Misfit.worst(circuit, conflict)
         row = int(circuit.pairs[conflict.other[0].pair].rows[-1])
         what = (
             f"two chains differ at {conflict.younger_ma:g}..{conflict.older_ma:g} Ma:"
             f" {circuit.say(conflict.plate, conflict.one)} and"
-            f" {circuit.say(conflict.plate, conflict.other)}"
+            f" {circuit.say(conflict.plate, conflict.other)}; {misfit.in_words(circuit)}"
         )
         remedy = "rank the tables in the manifest, or leave one of the pairs out"
-        findings[key] = Finding(
-            "warning", "two chains", place_of_row(circuit.history, row), what, km, remedy
-        )
-    return list(findings.values())
+        km = conflict.misfit_rad * EARTH_RADIUS_KM
+        place = place_of_row(circuit.history, row)
+        findings.append(Finding("warning", "two chains", place, what, km, remedy))
+    return findings
 
 
 def partner_jumps(circuit: Circuit) -> list[Finding]:
@@ -61,36 +76,24 @@ def partner_jumps(circuit: Circuit) -> list[Finding]:
     findings = []
     pieces = circuit.pieces
     seen: set[tuple[float, Chain, Chain]] = set()
-    for code, plate in enumerate(circuit.plates):
-        numbers = pieces.chain_of[code]
-        for at, cut in enumerate(pieces.cuts):
-            younger, older = int(numbers[2 * at]), int(numbers[2 * at + 2])
-            if younger < 0 or older < 0 or younger == older:
-                continue
-            one, other = pieces.chains[younger], pieces.chains[older]
-            while one and other and one[-1] == other[-1]:
-                one, other = one[:-1], other[:-1]
-            if (float(cut), one, other) in seen:
-                continue
-            seen.add((float(cut), one, other))
-            km = _difference_km(circuit, one, other, float(cut))
-            if km > TOLERANCE_KM and one and other and one[0] != other[0]:
-                row = int(circuit.pairs[other[0].pair].rows[0])
-                what = f"{plate} jumps at {cut:g} Ma, where its partner changes"
-                remedy = "compare the two rows at that age; the younger interval's is used"
-                findings.append(
-                    Finding(
-                        "warning", "partner change", place_of_row(circuit.history, row), what, km, remedy
-                    )
-                )
+    younger, older = pieces.chain_of[:, 0:-1:2], pieces.chain_of[:, 2::2]
+    changes = np.argwhere((younger >= 0) & (older >= 0) & (younger != older))
+    for code, at in changes.tolist():
+        plate, cut = circuit.plates[code], float(pieces.cuts[at])
+        one, other = pieces.chains[younger[code, at]], pieces.chains[older[code, at]]
+        while one and other and one[-1] == other[-1]:
+            one, other = one[:-1], other[:-1]
+        if not one or not other or one[0] == other[0] or (cut, one, other) in seen:
+            continue
+        seen.add((cut, one, other))
+        if apart_km(circuit, one, other, cut) > TOLERANCE_KM:
+            misfit = Misfit.at(circuit, one, other, cut)
+            row = nearest_row(circuit, other[0].pair, cut)
+            what = f"{plate} jumps at {cut:g} Ma, where its partner changes; {misfit.in_words(circuit)}"
+            remedy = "compare the two rows at that age; the younger interval's is used"
+            place = place_of_row(circuit.history, row)
+            findings.append(Finding("warning", "partner change", place, what, misfit.km, remedy))
     return findings
-
-
-def _difference_km(circuit: Circuit, one: Chain, other: Chain, age: float) -> float:
-    """Greatest distance on the globe between what two chains give at an age."""
-    at = np.array([age])
-    first, second = (Rotations(links.compose(circuit.stages, chain, at)) for chain in (one, other))
-    return float(first.angle_to(second)[0]) * EARTH_RADIUS_KM
 
 
 def gaps(circuit: Circuit) -> list[Finding]:
@@ -132,8 +135,8 @@ def not_from_present(circuit: Circuit) -> list[Finding]:
 
 def _row_at(circuit: Circuit, plate: str, age: float) -> int:
     """The row that ends or begins a chain of the plate at an age: nearest the plate that has one."""
-    found = circuit.rotations(plate, age)
-    chain = circuit.pieces.chains[int(found.chain[0])] if found.chain[0] >= 0 else ()
+    numbers, *_ = circuit.find(circuit.codes([plate]), np.array([age]))
+    chain = circuit.pieces.chains[int(numbers[0])] if numbers[0] >= 0 else ()
     for link in chain:
         pair = circuit.pairs[link.pair]
         for row, its_age in zip(pair.rows, pair.ages, strict=True):
@@ -163,7 +166,7 @@ def mixed_frames(circuit: Circuit) -> list[Finding]:
     return list(findings.values())
 
 
-def _end_of(circuit: Circuit, link: links.Link) -> str:
+def _end_of(circuit: Circuit, link: Link) -> str:
     pair = circuit.pairs[link.pair]
     return pair.relative_to if link.forward else pair.plate
 

@@ -8,15 +8,15 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
-from itertools import pairwise
+from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
 from restore.findings import Finding
 from restore.geometry import so3
 from restore.geometry.sphere import EARTH_RADIUS_KM, Floats
-from restore.geometry.uncertain import significance
+from restore.geometry.uncertain import RowErrors, Significance, significance, welch_satterthwaite
 from restore.history.audit.places import pair_name, place_of_row
 from restore.history.links import Pair
 from restore.history.store import History
@@ -30,6 +30,12 @@ MISFIT_KM = 500.0
 BETTER_BY = 5.0
 """A suspected slip must bring the row this many times nearer when it is undone."""
 
+SLOWEST_KM_PER_MYR = 3.0
+"""A table that is slower throughout moves at plate speeds if its angles are radians."""
+
+FEWEST_TO_JUDGE = 4
+"""A row is judged by its neighbours only in a track of so many rows, the present among them."""
+
 WIDEST_STAGE_DEG = 90.0
 SHORT_STAGE_MYR = 3.0
 CHANCE = 0.001
@@ -37,33 +43,81 @@ CHANCE = 0.001
 
 @dataclass(frozen=True, eq=False)
 class Track:
-    """One pair as a track in rotation space: ages, quaternions (n, 4) and row numbers (-1 today)."""
+    """One pair as a track in rotation space: ages, quaternions (n, 4) and row numbers (-1 today).
+
+    `first`: the first stage in which the pair holds, 1 where the present is only a neighbour.
+    """
 
     name: str
     ages: Floats
     turns: Floats
     rows: np.ndarray
+    first: int = 0
 
     @classmethod
-    def of(cls, history: History, pair: Pair) -> Track:
-        """The pair's rows with the present before them."""
+    def of(cls, pair: Pair, quaternions: Floats) -> Track:
+        """The pair's rows with the present before them; `quaternions` of all rows, today's last."""
         numbers, ages = pair.rows, pair.ages
-        turns = np.concatenate([history.rows.rotations().quaternions, so3.IDENTITY[None]])[numbers]
-        if ages[0] > 0.0:
+        first = int(ages[0] > 0.0)
+        if first:
             numbers, ages = np.insert(numbers, 0, -1), np.insert(ages, 0, 0.0)
-            turns = np.concatenate([so3.IDENTITY[None], turns])
-        return cls(pair_name(pair.plate, pair.relative_to), ages, turns, numbers)
+        name = pair_name(pair.plate, pair.relative_to)
+        return cls(name, ages, quaternions[numbers], numbers, first)
 
-    def expected(self, at: int) -> Floats:
-        """Where the neighbours put row `at`; beyond the oldest the last stage goes on."""
-        one, other = (at - 1, at + 1) if at + 1 < len(self.ages) else (at - 2, at - 1)
+    @cached_property
+    def expected(self) -> Floats:
+        """Where the neighbours put each row but the first; beyond the oldest the last stage goes on."""
+        at = np.arange(1, len(self.ages))
+        one, other = at - 1, at + 1
+        one[-1], other[-1] = at[-1] - 2, at[-1] - 1
         fraction = (self.ages[at] - self.ages[one]) / (self.ages[other] - self.ages[one])
         return so3.slerp(self.turns[one], self.turns[other], fraction)
 
     def misfit_km(self, at: int, turn: Floats) -> float:
         """Greatest distance on the globe between a rotation and the expected one at row `at`."""
-        away = so3.multiply(so3.conjugate(self.expected(at)), turn)
+        away = so3.multiply(so3.conjugate(self.expected[at - 1]), turn)
         return float(so3.angle(away)) * EARTH_RADIUS_KM
+
+    def misfits_km(self) -> Floats:
+        """The same for every row but the first, as it stands."""
+        away = so3.multiply(so3.conjugate(self.expected), self.turns[1:])
+        return so3.angle(away) * EARTH_RADIUS_KM
+
+    @cached_property
+    def slips(self) -> list[tuple[Slip, int]]:
+        """Suspected slips of the pen and their rows, by age."""
+        return self._undone[1]
+
+    @property
+    def corrected(self) -> Track:
+        """The track with its suspected slips undone."""
+        return self._undone[0]
+
+    @cached_property
+    def _undone(self) -> tuple[Track, list[tuple[Slip, int]]]:
+        """Slips are undone one after the other, worst first: one that is left misleads its neighbours."""
+        track, found = self, list[tuple[Slip, int]]()
+        while len(self.ages) >= FEWEST_TO_JUDGE and len(found) < len(self.ages):
+            suspects = np.flatnonzero(track.misfits_km() >= MISFIT_KM) + 1
+            slips = [slip for at in suspects if (slip := _slip(track, int(at))) is not None]
+            if not slips:
+                break
+            worst = max(slips, key=lambda slip: slip.km / max(slip.left_km, 1.0))
+            turns = np.array(track.turns)
+            turns[worst.at] = worst.turn
+            track = replace(track, turns=turns)
+            found.append((worst, int(track.rows[worst.at])))
+        return track, sorted(found, key=lambda slip: slip[0].at)
+
+    def stage_angles(self) -> Floats:
+        """Angles of the stages, radians."""
+        return so3.angle(so3.multiply(so3.conjugate(self.turns[:-1]), self.turns[1:]))
+
+
+def tracks_of(history: History, pairs: Sequence[Pair]) -> list[Track]:
+    """The tracks of all pairs."""
+    quaternions = np.concatenate([history.rows.rotations().quaternions, so3.IDENTITY[None]])
+    return [Track.of(pair, quaternions) for pair in pairs]
 
 
 @dataclass(frozen=True)
@@ -77,7 +131,7 @@ class Slip:
     left_km: float
 
 
-def slips(history: History, pairs: Sequence[Pair]) -> Iterator[Finding]:
+def slips(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
     """Rows that are far off their neighbours' path and near it with the sign or the unit changed."""
     words = {
         "sign": (
@@ -86,41 +140,23 @@ def slips(history: History, pairs: Sequence[Pair]) -> Iterator[Finding]:
         ),
         "radians": ("the angle looks like radians", "angles are in degrees"),
     }
-    for pair in pairs:
-        _, found = corrected(Track.of(history, pair))
-        for slip, row in found:
+    for track in tracks:
+        for slip, row in track.slips:
             said, remedy = words[slip.kind]
             what = (
-                f"{pair_name(pair.plate, pair.relative_to)} at {history.rows.age_ma[row]:g} Ma is off its"
-                f" neighbours' path: {said}; undone, it is {slip.left_km:.0f} km off"
+                f"{track.name} at {history.rows.age_ma[row]:g} Ma is off its neighbours' path: {said};"
+                f" undone, it is {slip.left_km:.0f} km off"
             )
             yield Finding("error", f"likely {slip.kind}", place_of_row(history, row), what, slip.km, remedy)
 
 
-def corrected(track: Track) -> tuple[Track, list[tuple[Slip, int]]]:
-    """The track with suspected slips undone one after the other, worst first, and the slips by row."""
-    found: list[tuple[Slip, int]] = []
-    turns = np.array(track.turns)
-    for _ in range(len(track.ages)):
-        track = Track(track.name, track.ages, turns, track.rows)
-        suspects = [s for at in range(1, len(track.ages)) if (s := _slip(track, at)) is not None]
-        if not suspects:
-            break
-        worst = max(suspects, key=lambda s: s.km / max(s.left_km, 1.0))
-        turns = np.array(turns)
-        turns[worst.at] = worst.turn
-        found.append((worst, int(track.rows[worst.at])))
-    return track, sorted(found, key=lambda pair: pair[0].at)
-
-
 def _slip(track: Track, at: int) -> Slip | None:
-    if len(track.ages) < 4 or track.rows[at] < 0:
+    if track.rows[at] < 0:
         return None
     km = track.misfit_km(at, track.turns[at])
-    if km < MISFIT_KM:
-        return None
     vector = so3.logarithm(track.turns[at])
-    degrees = so3.exponential(vector * (180.0 / math.pi)) if np.linalg.norm(vector) < 0.1 else None
+    small = np.linalg.norm(vector) < math.radians(2.0 * math.pi)
+    degrees = so3.exponential(vector * (180.0 / math.pi)) if small else None
     for kind, turn in (("sign", so3.conjugate(track.turns[at])), ("radians", degrees)):
         if turn is None:
             continue
@@ -130,18 +166,45 @@ def _slip(track: Track, at: int) -> Slip | None:
     return None
 
 
-def stages_too_fast_or_wide(history: History, pairs: Sequence[Pair]) -> Iterator[Finding]:
+def tables_in_radians(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
+    """Tables in which nothing ever moved faster than a plate does if its angles are radians.
+
+    Where all rows of a table have the wrong unit no neighbour gives a row away; the speeds do.
+    """
+    for number in range(len(history.tables)):
+        own = [track for track in tracks if _is_of_table(history, track, number)]
+        rows = np.flatnonzero((history.rows.table == number) & (history.rows.angle_deg != 0.0))
+        if len(rows) < FEWEST_TO_JUDGE - 1 or not own:
+            continue
+        fastest = max(float(np.max(t.stage_angles() / np.diff(t.ages))) for t in own) * EARTH_RADIUS_KM
+        angles = np.abs(history.rows.angle_deg[rows])
+        if fastest >= SLOWEST_KM_PER_MYR or angles.max() > 2.0 * math.pi:
+            continue
+        row = int(rows[angles.argmax()])
+        what = (
+            f"all {len(rows)} angles of the table lie below 2 pi and the fastest stage has"
+            f" {fastest:.2g} mm/yr: the angles look like radians"
+        )
+        remedy = "angles are in degrees; pass over this if the plates hardly moved"
+        km = float(np.rad2deg(angles.max()) - angles.max()) * math.pi / 180.0 * EARTH_RADIUS_KM
+        yield Finding("warning", "likely radians", place_of_row(history, row), what, km, remedy)
+
+
+def _is_of_table(history: History, track: Track, number: int) -> bool:
+    rows = track.rows[track.rows >= 0]
+    return len(track.ages) > 1 and bool(np.all(history.rows.table[rows] == number))
+
+
+def stages_too_fast_or_wide(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
     """Stages faster than any plate is known to have moved, and stages of more than 90 degrees.
 
     Slips of the pen are undone first: they are findings by themselves.
     """
-    for pair in pairs:
-        track, _ = corrected(Track.of(history, pair))
-        if len(track.ages) < 2:
-            continue
-        angles = so3.angle(so3.multiply(so3.conjugate(track.turns[:-1]), track.turns[1:]))
+    for track in (t.corrected for t in tracks):
+        angles = track.stage_angles()
         rates = angles * EARTH_RADIUS_KM / np.diff(track.ages)
-        for at in range(len(angles)):
+        doubtful = (rates > FASTEST_KM_PER_MYR) | (np.rad2deg(angles) > WIDEST_STAGE_DEG)
+        for at in np.flatnonzero(doubtful):
             span = f"{track.ages[at]:g} to {track.ages[at + 1]:g} Ma"
             place = place_of_row(history, int(track.rows[at + 1]))
             if rates[at] > FASTEST_KM_PER_MYR:
@@ -149,64 +212,70 @@ def stages_too_fast_or_wide(history: History, pairs: Sequence[Pair]) -> Iterator
                 remedy = f"above {FASTEST_KM_PER_MYR:.0f} mm/yr an age or an angle is likely wrong (common practice)"
                 km = float(angles[at]) * EARTH_RADIUS_KM
                 yield Finding("warning", "too fast", place, what, km, remedy)
-            if math.degrees(angles[at]) > WIDEST_STAGE_DEG:
+            if math.degrees(angles[at]) > WIDEST_STAGE_DEG and at >= track.first:
                 what = f"{track.name}, {span}: a stage of {math.degrees(angles[at]):.1f} degrees"
                 remedy = "the short way round is taken; add a row between them"
                 yield Finding("warning", "wide stage", place, what, remedy=remedy)
 
 
-def antipodal_poles(history: History, pairs: Sequence[Pair]) -> Iterator[Finding]:
+def antipodal_poles(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
     """Neighbouring rows whose poles are antipodal and whose angles differ in sign: one and the same
     rotation typed in two ways.
     """
     rows = history.rows
-    for pair in pairs:
-        numbers = [int(n) for n in pair.rows if n >= 0 and rows.angle_deg[n] != 0.0]
-        vectors = so3.logarithm(rows.rotations().quaternions)
-        for before, after in pairwise(numbers):
-            signs = np.sign(rows.angle_deg[[before, after]])
-            one, other = (vectors[n] / np.linalg.norm(vectors[n]) for n in (before, after))
-            if signs[0] != signs[1] and float(one @ other) > 0.5:
+    for track in tracks:
+        turning = (track.rows >= 0) & (rows.angle_deg[track.rows] != 0.0)
+        numbers, vectors = track.rows[turning], so3.logarithm(track.turns[turning])
+        signs = np.sign(rows.angle_deg[numbers])
+        for at in np.flatnonzero(signs[1:] != signs[:-1]):
+            one, other = (vectors[n] / np.linalg.norm(vectors[n]) for n in (at, at + 1))
+            if float(one @ other) > 0.5:
+                row = int(numbers[at + 1])
                 what = (
-                    f"{pair_name(pair.plate, pair.relative_to)} at {rows.age_ma[after]:g} Ma: the pole is"
-                    f" the antipode of its younger neighbour's, with the angle's sign"
+                    f"{track.name} at {rows.age_ma[row]:g} Ma: the pole is the antipode of its younger"
+                    f" neighbour's, with the angle's sign"
                 )
-                place = place_of_row(history, after)
                 remedy = "the rotation is the same; type both poles on one side"
-                yield Finding("note", "antipodal pole", place, what, 0.0, remedy)
+                yield Finding("note", "antipodal pole", place_of_row(history, row), what, 0.0, remedy)
 
 
-def rough_velocities(history: History, pairs: Sequence[Pair]) -> Iterator[Finding]:
+def rough_velocities(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
     """Short stages whose velocity differs from both neighbours' by more than the rows' errors allow.
 
     The difference `w2 - (w1 + w3) / 2` of angular velocities in the plate's coordinates, each
-    `-(u_older - u_younger) / dt` in its errors, against chi-square with 3 degrees of freedom.
+    `-(u_older - u_younger) / dt` in its errors, against chi-square with 3 degrees of freedom, or
+    against F where a kappa was estimated.
     """
     errors = history.row_errors()
-    for pair in pairs:
-        track, _ = corrected(Track.of(history, pair))
+    for track in (t.corrected for t in tracks):
         steps = np.diff(track.ages)
-        between = so3.multiply(so3.conjugate(track.turns[:-1]), track.turns[1:])
-        omega = -so3.logarithm(between) / steps[:, np.newaxis]
-        for at in range(1, len(steps) - 1):
-            rows = track.rows[at - 1 : at + 3]
-            if steps[at] > SHORT_STAGE_MYR or not all(errors.known[r] for r in rows if r >= 0):
-                continue
-            weights = np.array([-0.5 / steps[at - 1], 0.5 / steps[at - 1] + 1.0 / steps[at], 0.0, 0.0])
-            weights[2] = -(1.0 / steps[at] + 0.5 / steps[at + 1])
-            weights[3] = 0.5 / steps[at + 1]
-            covariance = np.zeros((3, 3))
-            for row, weight in zip(rows, weights, strict=True):
-                if row >= 0:
-                    covariance += weight**2 * errors.covariance[row]
-            kink = omega[at] - 0.5 * (omega[at - 1] + omega[at + 1])
-            test = significance(kink, covariance)
+        known = (track.rows < 0) | errors.known[track.rows]
+        judged = (steps[1:-1] <= SHORT_STAGE_MYR) & known[:-3] & known[1:-2] & known[2:-1] & known[3:]
+        for at in np.flatnonzero(judged) + 1:
+            kink, test = _kink(track, steps, int(at), errors)
             if test.probability < CHANCE:
                 km = float(np.linalg.norm(kink)) * float(steps[at]) * EARTH_RADIUS_KM
                 what = (
                     f"{track.name}, {track.ages[at]:g} to {track.ages[at + 1]:g} Ma: the velocity saws"
                     f" against both neighbours beyond its error (probability {test.probability:.1g})"
                 )
-                place = place_of_row(history, int(rows[1]))
+                place = place_of_row(history, int(track.rows[at + 1]))
                 remedy = "noise in the rows or errors stated too small; consider longer stages"
                 yield Finding("warning", "rough velocity", place, what, km, remedy)
+
+
+def _kink(track: Track, steps: Floats, at: int, errors: RowErrors) -> tuple[Floats, Significance]:
+    """The difference of one stage's velocity (3,), rad/Myr, from the mean of its neighbours', tested."""
+    turns = track.turns[at - 1 : at + 3]
+    vectors = so3.logarithm(so3.multiply(so3.conjugate(turns[:-1]), turns[1:]))
+    before, own, after = steps[at - 1 : at + 2]
+    kink = 0.5 * (vectors[0] / before + vectors[2] / after) - vectors[1] / own
+    weights = (-0.5 / before, 0.5 / before + 1.0 / own, -1.0 / own - 0.5 / after, 0.5 / after)
+    covariance, by_dof = np.zeros((3, 3)), 0.0
+    for row, weight in zip(track.rows[at - 1 : at + 3], weights, strict=True):
+        if row >= 0:
+            part = weight**2 * errors.covariance[row]
+            covariance += part
+            by_dof += np.trace(part) ** 2 / errors.dof[row]
+    dof = float(welch_satterthwaite(np.trace(covariance), np.asarray(by_dof)))
+    return kink, significance(kink, covariance, dof)
