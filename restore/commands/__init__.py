@@ -17,6 +17,9 @@ COMMANDS = {
     "check": ("checks", "Audit a history or a scenario."),
     "sites": ("sites", "Restore dated sites to their own or to given ages."),
     "rates": ("rates", "How fast a plate moves relative to another, at points."),
+    "margin": ("margins", "What happens along a line between two plates."),
+    "when": ("whens", "When a site crossed a latitude, came near, was nearest."),
+    "velocity-field": ("fields", "Velocities on a global grid, each cell on its own plate."),
     "pole": ("poles", "The rotation of a plate from today to an age."),
     "stage": ("poles", "The motion of a plate from an older to a younger age."),
     "compare": ("poles", "Whether two histories differ, by how much and how surely."),
@@ -49,7 +52,7 @@ class LazyGroup(click.Group):
         if name not in COMMANDS:
             return None
         module = import_module(f"restore.commands.{COMMANDS[name][0]}")
-        command: click.Command = getattr(module, name)
+        command: click.Command = getattr(module, name.replace("-", "_"))
         return command
 
     def resolve_command(

@@ -13,12 +13,13 @@ from numpy.typing import ArrayLike
 
 from restore.errors import InputError, OutsideHistoryError
 from restore.geometry.rotations import Rotations
-from restore.geometry.sphere import EARTH_RADIUS_KM, Floats
+from restore.geometry.sphere import EARTH_RADIUS_KM, Floats, lat_lon
 from restore.geometry.uncertain import significance
 from restore.history import links
 from restore.history.circuit import Circuit, CircuitRotations
 from restore.history.links import Chain, Link
 from restore.history.store import History
+from restore.history.velocity import Functional, angular_velocity, sensitivity
 
 
 @dataclass(frozen=True, eq=False)
@@ -32,6 +33,7 @@ class Closure:
     misfit: Rotations
     covariance: Floats
     dof: Floats
+    found: CircuitRotations
 
     def columns(self) -> dict[str, Any]:
         """As columns; `probability` that errors of rows alone leave such a misfit, NaN if not known."""
@@ -74,10 +76,41 @@ def closure(history: History, plates: Sequence[str], ages: ArrayLike) -> Closure
                 f" {pair.youngest_ma:g}..{pair.oldest_ma:g} Ma"
             )
     found = along(circuit, chain, age)
-    sensitivity, errors = found.sensitivity(), history.row_errors()
+    jacobians, errors = found.sensitivity(), history.row_errors()
     return Closure(
-        loop, age, found.rotations, sensitivity.covariance(errors), sensitivity.effective_dof(errors)
+        loop, age, found.rotations, jacobians.covariance(errors), jacobians.effective_dof(errors), found
     )
+
+
+def velocity_closure(history: History, plates: Sequence[str], age_ma: float) -> dict[str, Any]:
+    """The angular velocity left over round a loop of plates at an age (Ma), and its significance.
+
+    Sum of the pairs' angular velocities in coordinates of the first plate: components (rad/Myr), its
+    pole and rate (deg/Myr), the greatest speed on the globe (mm/yr), and the probability that errors
+    of rows alone leave it (Gordon et al. 1987, Geophys. Res. Lett. 14, 587-590: three plates). Raises
+    as `closure` does.
+    """
+    found = closure(history, plates, age_ma).found
+    eta = angular_velocity(found)[0]
+    nothing = np.zeros((1, 3))
+    parts = [Functional(nothing, axis[np.newaxis]) for axis in np.eye(3)]
+    jacobians = sensitivity(found, parts)
+    errors = history.row_errors()
+    covariance = jacobians.covariance(errors)[0]
+    test = significance(eta, covariance, float(jacobians.effective_dof(errors)[0]))
+    lat, lon = lat_lon(eta)
+    rate = float(np.linalg.norm(eta))
+    return {
+        "loop": [*closure(history, plates, age_ma).loop],
+        "age_ma": age_ma,
+        "omega_rad_per_myr": eta.tolist(),
+        "pole_lat_deg": float(lat),
+        "pole_lon_deg": float(lon),
+        "rate_deg_per_myr": float(np.rad2deg(rate)),
+        "greatest_mm_yr": rate * EARTH_RADIUS_KM,
+        "statistic": test.statistic,
+        "probability": test.probability,
+    }
 
 
 def _link(circuit: Circuit, one: str, other: str) -> Link:

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from restore.errors import InputError
+from restore.geometry import so3
 from restore.geometry.latitudes import Latitudes
 from restore.geometry.sphere import (
     EARTH_RADIUS_KM,
@@ -22,6 +23,7 @@ from restore.geometry.sphere import (
 )
 from restore.geometry.uncertain import Sensitivity
 from restore.history.circuit import REACHED, Circuit, CircuitRotations
+from restore.history.poles import stage_pole
 from restore.history.store import History
 from restore.history.velocity import Functional, angular_velocity, sensitivity
 
@@ -146,6 +148,57 @@ def rates(
         omega,
         jacobians,
         found,
+    )
+
+
+def average_rates(
+    history: History,
+    plate: str,
+    relative_to: str,
+    lat_deg: ArrayLike,
+    lon_deg: ArrayLike,
+    older_ma: float,
+    younger_ma: float,
+    latitudes: Latitudes | None = None,
+    radius_km: float = EARTH_RADIUS_KM,
+    beyond: str = "refuse",
+) -> Rates:
+    """Mean velocities of today's points (degrees) on `plate` between two ages (Ma).
+
+    The stage `S = R(t1) R(t2)^-1` over its time, `w = log(S) / (t2 - t1)`, at the point half way along
+    the stage, in the partner's coordinates. Rows that both ages use cancel in the errors. Raises
+    InputError if the ages are not in order, DomainError where the history has no answer.
+    """
+    kind = latitudes or Latitudes()
+    stage = stage_pole(history, plate, relative_to, older_ma, younger_ma, beyond=beyond)
+    lat, lon = np.broadcast_arrays(
+        *(np.atleast_1d(np.asarray(a, dtype=np.float64)) for a in (lat_deg, lon_deg))
+    )
+    span = older_ma - younger_ma
+    vector = stage.rotation.as_vectors()
+    older = Circuit(history, relative_to, beyond).at(plate, older_ma).rotations
+    then = stage.rotation.power(0.5).apply(older.apply(unit_vectors(kind.inward(lat), lon)))
+    omega = np.broadcast_to(vector / span, then.shape)
+    east, north = tangent_frame(then)
+    moving = cross(omega, then) * radius_km
+    covariance = np.full((len(lat), 2, 2), np.nan)
+    if stage.covariance is not None:
+        jacobian = np.linalg.inv(so3.right_jacobian(vector)) / span
+        of_omega = jacobian @ stage.covariance @ jacobian.T
+        components = np.stack([north, -east], axis=-2) * radius_km
+        covariance = components @ of_omega @ np.swapaxes(components, -1, -2)
+    then_lat, then_lon = lat_lon(then)
+    return Rates(
+        lat,
+        lon,
+        kind.outward(then_lat),
+        then_lon,
+        np.full(lat.shape, 0.5 * (older_ma + younger_ma)),
+        dot(moving, east),
+        dot(moving, north),
+        np.rad2deg(angular_distance(omega, then)),
+        covariance,
+        omega,
     )
 
 
