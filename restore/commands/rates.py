@@ -27,8 +27,10 @@ if TYPE_CHECKING:
 @click.option("--plate", help="The plate that moves.")
 @click.option("--relative-to", metavar="OTHER", help="The plate or frame held still.")
 @click.option("--at", type=Numbers("LAT", "LON"), help="One point.")
-@click.option("--points", metavar="FILE", help="A table of points: lat_deg, lon_deg and any others.")
+@click.option("--points", metavar="FILE", help="A table of points: lat_deg, lon_deg and any others;"
+              " or lines (GeoJSON), whose vertices are taken.")  # fmt: skip
 @click.option("--age", "age_ma", type=Age(), default=0.0, show_default=True, help="Age, Ma.")
+@click.option("--average", type=Numbers("OLDER", "YOUNGER"), help="The mean between two ages instead.")
 @click.option(
     "--at-on", type=click.Choice(["plate", "relative-to"]), default="plate", show_default=True,
     help="The points are today's on the plate, or positions in OTHER's coordinates at that age.",
@@ -46,6 +48,7 @@ def rates(
     at: tuple[float, float] | None,
     points: str | None,
     age_ma: float,
+    average: tuple[float, float] | None,
     at_on: str,
     history_file: str | None,
     pole: tuple[float, float, float] | None,
@@ -67,11 +70,13 @@ def rates(
         raise click.UsageError("give either --history FILE or --pole LAT,LON,DEG_PER_MYR")
     if pole is None and (plate is None or relative_to is None):
         raise click.UsageError("with --history give --plate and --relative-to")
+    if average is not None and (pole is not None or not average[0] > average[1] >= 0.0):
+        raise click.UsageError("--average OLDER,YOUNGER goes with --history, the older age first")
     from restore.files.points import beside
     from restore.files.tables import TableOut
     from restore.geometry.latitudes import Latitudes
+    from restore.motion.rates import average_rates, rates_from_pole
     from restore.motion.rates import rates as rates_at
-    from restore.motion.rates import rates_from_pole
     from restore.scenario.provenance import provenance
 
     kind = Latitudes(latitudes)
@@ -87,11 +92,16 @@ def rates(
         assert relative_to is not None
         history = read_history(history_file)
         inputs += history_inputs(history_file, history)
-        found = rates_at(history, plate, relative_to, lat, lon, age_ma, at_on, kind, radius_km, beyond)
+        asked = (history, plate, relative_to, lat, lon)
+        if average is not None:
+            found = average_rates(*asked, *average, kind, radius_km, beyond)
+        else:
+            found = rates_at(*asked, age_ma, at_on, kind, radius_km, beyond)
     settings: dict[str, Any] = {
         "plate": plate,
         "relative_to": relative_to,
         "age_ma": age_ma,
+        "average": average,
         "at_on": at_on,
     }
     settings |= {"pole": pole, "latitudes": latitudes, "radius_km": radius_km, "beyond": beyond}
@@ -104,6 +114,12 @@ def rates(
 
 
 def _read_points(file: str, layout: Layout) -> tuple[dict[str, list[str]], list[float], list[float]]:
+    from restore.files.lines import read_lines
     from restore.files.points import read_points
 
-    return read_points(file, layout)
+    if not file.lower().endswith((".geojson", ".gpkg", ".shp")):
+        return read_points(file, layout)
+    lines = read_lines(file)
+    own = {"line": [str(number) for number, one in enumerate(lines, 1) for _ in one.lat_deg]}
+    lat = [float(value) for one in lines for value in one.lat_deg]
+    return own, lat, [float(value) for one in lines for value in one.lon_deg]

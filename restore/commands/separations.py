@@ -29,10 +29,10 @@ class PlacedSite(click.ParamType[Any]):
     def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
         if isinstance(value, tuple):
             return value
-        numbers, comma, plate = value.rpartition(",")
-        if not comma or not plate.strip():
+        parts = value.split(",", 2)
+        if len(parts) < 3 or not parts[2].strip():
             self.fail(f"{value!r}: write LAT,LON,PLATE", param, ctx)
-        return (*Numbers("LAT", "LON").convert(numbers, param, ctx), plate.strip())
+        return (*Numbers("LAT", "LON").convert(",".join(parts[:2]), param, ctx), parts[2].strip())
 
 
 @click.command()
