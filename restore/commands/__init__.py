@@ -16,6 +16,7 @@ COMMANDS = {
     "run": ("runs", "Do a whole job that a scenario file says."),
     "check": ("checks", "Audit a history or a scenario."),
     "sites": ("sites", "Restore dated sites to their own or to given ages."),
+    "lines": ("lines", "Restore coasts, outlines, any lines and polygons."),
     "rates": ("rates", "How fast a plate moves relative to another, at points."),
     "margin": ("margins", "What happens along a line between two plates."),
     "when": ("whens", "When a site crossed a latitude, came near, was nearest."),

@@ -108,6 +108,8 @@ def rates(
     count = len(found.lat_deg)
     said = {"plate": plate or "", "relative_to": relative_to or "", "latitudes": latitudes}
     said["errors"] = "error of rows only" if pole is None else "not known"
+    if pole is None:
+        said["frame_kind"] = history.kind_of(str(relative_to))
     results = found.columns() | {name: [value] * count for name, value in said.items()}
     with TableOut(out, provenance(inputs, settings), ("then_lat_deg", "then_lon_deg")) as target:
         target.add(beside(own, results))

@@ -151,7 +151,7 @@ class TableOut:
             if isinstance(first, np.ndarray):
                 joined[name] = np.concatenate(parts)
             else:
-                joined[name] = [value for part in parts for value in part]
+                joined[name] = _as_numbers(name, [value for part in parts for value in part])
         return joined
 
     def _write_other(self, part: Path) -> None:
@@ -207,7 +207,14 @@ class TableOut:
                 attributes = {}
             variables[name] = (("row",), values, attributes)
         attributes = {"Conventions": "CF-1.11", "provenance": json.dumps(self.provenance)}
-        xr.Dataset(variables, attrs=attributes).to_netcdf(part, engine="netcdf4")
+        try:
+            xr.Dataset(variables, attrs=attributes).to_netcdf(part, engine="netcdf4")
+        except (RuntimeError, ValueError) as exc:
+            # names from the user's header may hold what netCDF does not allow
+            reason = str(exc).partition(". ")[0]
+            raise InputError(
+                f"{self.path}: cannot be written as netCDF: {reason}; rename the column, or write another kind"
+            ) from None
 
     def _write_parquet(self, part: Path, columns: Mapping[str, Any]) -> None:
         try:
@@ -231,6 +238,16 @@ class TableOut:
         table = geopandas.GeoDataFrame(frame, geometry=places)
         metadata = {"provenance": json.dumps(self.provenance)}
         table.to_file(part, driver="GPKG", layer=Path(str(self.path)).stem, dataset_metadata=metadata)
+
+
+def _as_numbers(name: str, values: list[Any]) -> list[Any] | np.ndarray:
+    """A user's column of texts as numbers, if its name says what they are and all of them are."""
+    if not name.endswith(("_deg", "_ma", "_myr", "_km")) or not all(isinstance(v, str) for v in values):
+        return values
+    try:
+        return np.array([float(v) if v.strip() else np.nan for v in values], dtype=np.float64)
+    except ValueError:
+        return values
 
 
 def csv_text(columns: Columns) -> str:

@@ -53,7 +53,7 @@ class Circuit:
         self.pairs = joined(links.pairs_of(history))
         self.stages = links.Stages.of(history.rows.rotations().quaternions, self.pairs)
         tolerance = TOLERANCE_KM / EARTH_RADIUS_KM
-        self.pieces: Pieces = cut_time(self.pairs, self.plates, frame, self._misfit, tolerance)
+        self.pieces: Pieces = cut_time(self.pairs, self.plates, frame, self._misfits, tolerance)
         self._reach_ends()
 
     def _check_label(self, label: str, role: str = "plate") -> None:
@@ -61,15 +61,23 @@ class Circuit:
             hint = did_you_mean(label, self.plates)
             raise UnknownPlateError(f"{role} {label!r} is not in the history; {hint}".rstrip("; "))
 
-    def _misfit(self, one: Chain, other: Chain, younger: float, older: float) -> float:
-        """Greatest angle between two chains over the rows' ages from younger to older, radians."""
-        ages = [np.linspace(younger, older, 5)]
-        ages += [self.stages.ages[link.pair] for link in (*one, *other)]
-        inside = np.unique(np.concatenate(ages))
-        inside = inside[(inside >= younger) & (inside <= older)]
-        first = Rotations(links.compose(self.stages, one, inside))
-        second = Rotations(links.compose(self.stages, other, inside))
-        return float(first.angle_to(second).max())
+    def _misfits(self, one: Chain, other: Chain, younger: Floats, older: Floats) -> Floats:
+        """Greatest angles between two chains over the rows' ages in spans from younger to older, radians."""
+        rows = np.unique(np.concatenate([self.stages.ages[link.pair] for link in (*one, *other)]))
+        begins = np.searchsorted(rows, younger, side="left")
+        counts = np.searchsorted(rows, older, side="right") - begins
+        starts = np.cumsum(5 + counts) - (5 + counts)
+        ages = np.empty(int((5 + counts).sum()))
+        inside = np.arange(5)[:, np.newaxis] + starts
+        ages[inside] = younger
+        long = older > younger
+        ages[inside[:, long]] = np.linspace(younger[long], older[long], 5)
+        number = np.repeat(np.arange(len(starts)), counts)
+        order = np.arange(len(number)) - np.repeat(np.cumsum(counts) - counts, counts)
+        ages[starts[number] + 5 + order] = rows[begins[number] + order]
+        first, second = (Rotations(links.compose(self.stages, chain, ages)) for chain in (one, other))
+        sizes: Floats = np.maximum.reduceat(first.angle_to(second), starts)
+        return sizes
 
     def _reach_ends(self) -> None:
         """For each plate the youngest and oldest piece in which it has a chain."""
@@ -93,6 +101,12 @@ class Circuit:
         self._check_label(plate)
         last = int(self._last_piece[self._code[plate]])
         return float(self.pieces.cuts[(last - 1) // 2]) if last >= 1 else np.nan
+
+    def oldest_by_code(self, codes: Ints) -> Floats:
+        """The oldest age (Ma) of each plate's chain, by number; NaN where it never has one."""
+        last = self._last_piece[np.where(codes >= 0, codes, 0)]
+        ends = self.pieces.cuts[(np.maximum(last, 1) - 1) // 2] if len(self.pieces.cuts) else np.nan
+        return np.where((codes >= 0) & (last >= 1), ends, np.nan)
 
     def find(self, codes: Ints, ages: Floats) -> tuple[NDArray[np.int32], NDArray[np.int8], Floats]:
         """Chain number, status and the age to use, for plates by number (n,) and ages (n,).

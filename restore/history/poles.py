@@ -76,6 +76,7 @@ class Pole:
         if not none:
             lat = float(self.latitudes.outward(lat))
         record: dict[str, Any] = {"plate": self.plate, "relative_to": self.relative_to}
+        record["frame_kind"] = self.ledger.circuit.history.kind_of(self.relative_to)
         if self.age_ma is not None:
             record["age_ma"] = self.age_ma
         else:

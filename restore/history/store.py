@@ -14,7 +14,7 @@ import numpy as np
 
 from restore.errors import HistoryError, InputError, TableError, raise_faults
 from restore.files.delimited import Layout
-from restore.findings import Finding
+from restore.findings import Finding, Place, did_you_mean
 from restore.geometry.uncertain import RowErrors
 from restore.history.conventions import Conventions, Table
 from restore.history.manifest import FRAME_KINDS, read_manifest
@@ -74,6 +74,12 @@ class History:
             faults = [finding.line() for finding in findings if finding.severity == "error"]
             raise HistoryError("\n".join(broken + faults))
         findings += check_rows(rows, tables)
+        known = {row.plate for row in rows} | {row.relative_to for row in rows}
+        for label in sorted(set(frames) - known):
+            what = f"frames: {label!r} stands in no row"
+            findings.append(
+                Finding("warning", "unknown frame", Place(), what, remedy=did_you_mean(label, known))
+            )
         raise_faults(HistoryError, findings)
         return cls(Rows.from_rows(rows), tuple(tables), frames, title, tuple(findings))
 

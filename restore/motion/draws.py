@@ -53,8 +53,8 @@ def drawn_columns(
     """Summaries (n,) of the drawn positions of points at ages (n,), Ma.
 
     `ranges`: youngest and oldest age of those points (NaN for the others) whose age is drawn evenly
-    between the two. `numbers` (n,): each point's number in the whole table, which seeds its own
-    draws, so that they do not depend on chunks. The columns: the mean position, the radius about it
+    between the two. `numbers` (n,): a number of each point's own, which seeds its draws, so
+    that they depend on nothing else. The columns: the mean position, the radius about it
     that holds 95 % of the draws, the 2.5, 50 and 97.5 % quantiles of latitude and of longitude (in
     [-180, 180), counted about the mean). NaN where a row's error is not known.
     """

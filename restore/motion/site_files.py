@@ -62,10 +62,8 @@ def restore_file(
     with DelimitedReader(table, layout) as reader:
         site_reader = SiteReader(reader, job.ages is None, job.clock)
         with TableOut(out, provenance, POSITION) as target:
-            first_row = 0
             for chunk in reader.chunks(CHUNK):
-                results = restore_table(site_reader.parse(chunk), job, first_row)
-                first_row += len(chunk)
+                results = restore_table(site_reader.parse(chunk), job)
                 target.add(results.columns)
                 say(results.findings)
                 done.counts.update(results.counts())
@@ -100,8 +98,8 @@ class _WrittenOut:
     rows: int = 0
 
     def add(self, results: SiteResults) -> None:
-        few = self.rows + len(results) <= MOST_WRITTEN_OUT
-        ledger = results.with_details() if few else results.ledger
+        left = MOST_WRITTEN_OUT - self.rows
+        ledger = results.with_details() if left > 0 else results.ledger
         ids = ledger.id_column()
         names = results.columns.get("site")
         for item in np.flatnonzero(ledger.segment >= 0).tolist():
@@ -109,7 +107,7 @@ class _WrittenOut:
             if names is not None:
                 record["site"] = names[item]
             record |= {"restored_age_ma": float(ledger.ages[item]), "ledger_id": ids[item]}
-            if few:
+            if item < left:
                 record["links"] = ledger.links_of(item)
             self.results.append(record)
         self.rows += len(results)

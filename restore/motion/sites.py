@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import zlib
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
@@ -32,6 +33,10 @@ if TYPE_CHECKING:
 
 NOT_FORMED, OLDER_THAN_CRUST, NO_AGE, BAD_COORDINATE = range(len(SAYS), len(SAYS) + 4)
 STATUSES = (*SAYS, "crust not yet formed", "older than its crust", "no age", "bad coordinate")
+POINT_COLUMNS = (
+    *("restored_lat_deg", "restored_lon_deg", "ellipse_major_km", "ellipse_minor_km"),
+    *("ellipse_azimuth_deg", "ellipse_dof"),
+)
 RANGE_COLUMNS = (
     "restored_young_lat_deg",
     "restored_young_lon_deg",
@@ -111,9 +116,9 @@ class SiteResults:
         return pd.DataFrame({name: list(column) for name, column in self.columns.items()})
 
 
-def restore_table(table: SiteTable, job: SiteJob, first_row: int = 0) -> SiteResults:
-    """Restore the sites of one table, or of one chunk of it that begins at row `first_row`."""
-    return _Restoring(table, job, first_row).results()
+def restore_table(table: SiteTable, job: SiteJob) -> SiteResults:
+    """Restore the sites of one table, or of one chunk of it."""
+    return _Restoring(table, job).results()
 
 
 def restore_sites(
@@ -162,10 +167,9 @@ def restore_sites(
 class _Restoring:
     """One table on its way: the sites, what was asked, and what is known of each row."""
 
-    def __init__(self, table: SiteTable, job: SiteJob, first_row: int) -> None:
+    def __init__(self, table: SiteTable, job: SiteJob) -> None:
         self.table = table
         self.job = job
-        self.first_row = first_row
         self.circuit = job.circuit
         self.findings = list(table.findings)
         self.own_ages = job.ages is None
@@ -334,6 +338,11 @@ class _Restoring:
         path = path_length_km(self.circuit, points, young, old, self.job.radius_km)
         results["path_km"][rows] = path
         results["path_95_km"][rows] = 0.95 * path
+        # a range that reaches past what can be answered has no answer as a whole
+        lost = rows[status[rows] != REACHED]
+        for name in (*POINT_COLUMNS, *RANGE_COLUMNS):
+            results[name][lost] = np.nan
+        results["errors"] = ["" if row in set(lost) else said for row, said in enumerate(results["errors"])]
         results["status"] = [STATUSES[code] for code in status.tolist()]
 
     def _drawn(self, asked: Floats, status: NDArray[np.int8], repeat: int) -> dict[str, Floats]:
@@ -347,7 +356,7 @@ class _Restoring:
             ranged = self.table.ranged
             ranges = np.where(ranged, young, np.nan)[rows], np.where(ranged, old, np.nan)[rows]
         drawn = drawn_columns(
-            self.circuit, points, asked[rows], ranges, self.job.draws, rows + self.first_row * repeat,
+            self.circuit, points, asked[rows], ranges, self.job.draws, self._seeds(rows, asked, repeat),
             self.job.radius_km,
         )  # fmt: skip
         columns = {}
@@ -355,6 +364,16 @@ class _Restoring:
             columns[name] = np.full(len(status), np.nan)
             columns[name][rows] = values
         return columns
+
+    def _seeds(self, rows: NDArray[np.int64], asked: Floats, repeat: int) -> NDArray[np.int64]:
+        """A number for each row made from the site itself, so that its draws do not depend on others."""
+        numbers = self.table.numbers
+        seeds = []
+        for row in rows.tolist():
+            site = row // repeat
+            said = (self.plate[site], float(asked[row]), *(float(numbers[name][site]) for name in numbers))
+            seeds.append(zlib.crc32(repr(said).encode()))
+        return np.array(seeds, dtype=np.int64)
 
     def _add_remarks(
         self, results: dict[str, Any], asked: Floats, status: NDArray[np.int8], repeat: int
@@ -368,6 +387,12 @@ class _Restoring:
             older = self.table.numbers["age_old_ma"]
             limit = np.where(np.isnan(np.repeat(older, repeat)), age, np.repeat(older, repeat))
             remarks[(limit < asked) & (status == REACHED)] = "sample is younger than the asked age"
+        if self.circuit.beyond != "refuse":
+            ends = np.repeat(self.circuit.oldest_by_code(self.codes), repeat)
+            for row in np.flatnonzero((asked > ends) & (status == REACHED)).tolist():
+                done = "held at" if self.circuit.beyond == "hold" else "extended beyond"
+                said = f"{done} {ends[row]:g} Ma"
+                remarks[row] = f"{remarks[row]}; {said}" if remarks[row] else said
         for row, remark in enumerate(self.placing.remark):
             if remark:
                 some = slice(row * repeat, (row + 1) * repeat)

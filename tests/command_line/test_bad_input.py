@@ -1,9 +1,7 @@
 """Histories and manifests at fault: one clear line per fault, exit 1, nothing on standard output."""
 
-import os
-
 import pytest
-from command_line.world import HEAD, leftovers
+from command_line.world import HEAD, deny, leftovers
 
 ZERO = "alba,deep,0,,,0"
 TEN = "alba,deep,10,90,0,10"
@@ -250,22 +248,12 @@ def test_files_that_are_none(here, ask, kind, ending):
 
 
 def test_a_file_that_may_not_be_read(here, ask, monkeypatch):
-    """A file without permission is said to be unreadable; where nobody is refused, reading is made to fail."""
-    path = here / "h.csv"
-    path.write_text(table(ZERO, TEN), encoding="utf-8")
-    path.chmod(0)
-    if os.access(path, os.R_OK):
-        monkeypatch.setattr("pathlib.Path.open", denied)
+    """A file without permission is said to be unreadable."""
+    (here / "h.csv").write_text(table(ZERO, TEN), encoding="utf-8")
+    deny(here / "h.csv", monkeypatch)
     answer = ask("pole", "alba", "--relative-to", "deep", "--age", "5", "--history", "h.csv")
-    assert (answer.code, answer.out, answer.said) == (
-        1,
-        "",
-        ["error: h.csv: cannot be read: Permission denied"],
-    )
-
-
-def denied(*_args, **_options):
-    raise PermissionError(13, "Permission denied")
+    assert (answer.code, answer.out) == (1, "")
+    assert answer.said == ["error: h.csv: cannot be read: Permission denied"]
 
 
 @pytest.mark.parametrize("data", [b"", b"hello", b"CDF\x01"])

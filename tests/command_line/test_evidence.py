@@ -153,6 +153,20 @@ def test_the_same_evidence_has_the_same_id(restore):
     assert two[1]["ledger_id"] == one["ledger_id"] != two[2]["ledger_id"]
 
 
+def test_only_the_first_results_are_written_out(here, ask, monkeypatch):
+    """JSON: the first rows have their links in full, whatever the chunks; the others name their entry."""
+    monkeypatch.setattr("restore.motion.site_files.MOST_WRITTEN_OUT", 10)
+    found = []
+    for size in (50_000, 7, 4):
+        monkeypatch.setattr("restore.motion.site_files.CHUNK", size)
+        ask(*DEMO_SITES, "--ledger", "ledger.json")
+        found.append(json.loads((here / "ledger.json").read_text(encoding="utf-8")))
+    assert found[0] == found[1] == found[2]
+    assert all(("links" in result) == (result["row"] < 10) for result in found[0]["results"])
+    entries = {entry["ledger_id"] for entry in found[0]["entries"]}
+    assert {result["ledger_id"] for result in found[0]["results"]} == entries
+
+
 @pytest.mark.parametrize(
     ("name", "message"),
     [

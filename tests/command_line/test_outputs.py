@@ -107,6 +107,19 @@ def test_netcdf(here, restore):
     assert math.isnan(lon[1])
 
 
+@pytest.mark.parametrize("name", ["depth/m", "#3", ""])
+def test_names_that_netcdf_does_not_allow(here, restore, name):
+    """A column whose name netCDF cannot take is refused in one line; CSV takes it."""
+    table = f"site,lat_deg,lon_deg,age_ma,plate,{name}\na,0,0,5,alba,x\n"
+    answer = restore(table, "--out", "out.nc")
+    assert (answer.code, answer.out, len(answer.said)) == (1, "", 1)
+    assert answer.said[0].startswith("error: out.nc: cannot be written as netCDF: ")
+    assert answer.said[0].endswith("; rename the column, or write another kind")
+    assert not (here / "out.nc").exists()
+    assert leftovers(here) == []
+    assert restore(table, "--out", "out.csv").code == 0
+
+
 def test_parquet(here, restore):
     """pandas reads it: the same columns and values, missing ones missing."""
     import pandas as pd

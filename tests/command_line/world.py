@@ -16,6 +16,8 @@ import sys
 from dataclasses import dataclass
 from pathlib import Path
 
+import pytest
+
 ROOT = Path(__file__).parents[2]
 DEMO = ROOT / "scenario_files"
 
@@ -103,3 +105,18 @@ def in_a_process(*args: str, stdin: bytes = b"", folder: Path | None = None) -> 
 def leftovers(folder: Path) -> list[str]:
     """Files that a writer began and did not finish."""
     return sorted(path.name for path in folder.rglob("*.part"))
+
+
+def deny(path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Make a file unreadable; for a user whom no permission stops, opening it fails instead."""
+    path.chmod(0)
+    if not os.access(path, os.R_OK):
+        return
+    opened = Path.open
+
+    def refusing(self: Path, *args, **options):
+        if self.name == path.name:
+            raise PermissionError(13, "Permission denied")
+        return opened(self, *args, **options)
+
+    monkeypatch.setattr(Path, "open", refusing)
