@@ -7,6 +7,7 @@ the fraction between two rows, the rotation of each link) follows from the age.
 
 from __future__ import annotations
 
+import functools
 import hashlib
 import math
 from collections.abc import Iterable, Iterator
@@ -188,6 +189,7 @@ def entries(circuit: Circuit, segments: Iterable[Segment]) -> dict[str, list[Any
     return {name: [row[i] for row in rows] for i, name in enumerate(names)}
 
 
+@functools.lru_cache(maxsize=100_000)
 def segment_id(circuit: Circuit, segment: Segment) -> str:
     """Ten hexadecimal digits made from the links and rows of a segment."""
     said: list[tuple[Any, ...]] = []
