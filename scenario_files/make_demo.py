@@ -130,6 +130,47 @@ file = "ridge.csv"
 plate = "{PAIR[0]}"
 relative_to = "{PAIR[1]}"
 age_ma = 0.0
+
+[[task]]
+name = "ridge-flowlines"
+kind = "flowlines"
+file = "ridge.csv"
+between = ["ovrath", "quemmel"]
+ages = "0:100:10"
+
+[[task]]
+name = "ridge-isochrons"
+kind = "isochrons"
+file = "ridge.geojson"
+between = ["ovrath", "quemmel"]
+ages = [20.0, 40.0, 60.0, 80.0]
+
+[[task]]
+name = "hotspot-trails"
+kind = "trails"
+file = "hotspots.csv"
+plate = "quemmel"
+ages = "0:100:10"
+
+[[task]]
+name = "margin-rates"
+kind = "margin"
+file = "margin.geojson"
+between = ["ovrath", "ibbun"]
+ages = [0.0, 20.0, 40.0]
+
+[[task]]
+name = "outlines-restored"
+kind = "lines"
+file = "outlines.geojson"
+ages = [0.0, 60.0, 100.0]
+
+[[task]]
+name = "equator-crossings"
+kind = "when"
+file = "cores.csv"
+during = [0.0, 100.0]
+latitude = 0.0
 """
 
 

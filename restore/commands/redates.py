@@ -63,7 +63,7 @@ def _history(file: str, own: Any, to: Any, out: str | None) -> int:
         "chron": rows.chron.tolist(),
         "age_before_ma": history.rows.age_ma,
         "age_ma": rows.age_ma,
-        "moved_myr": rows.age_ma - history.rows.age_ma,
+        "moved_myr": (rows.age_ma - history.rows.age_ma).round(9),
         "moved_km": [round(moved.km, 6) for moved in done.moved],
         "how": [moved.how for moved in done.moved],
         "loose": [moved.loose for moved in done.moved],

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from restore.geometry.sphere import Floats, angular_distance, cross, dot, length
 
 AT_ONCE = 2_000_000
+Ints = NDArray[np.int64]
 
 
 def nearest_on_edges(points: Floats, vertices: Floats, closed: bool = False) -> Floats:
@@ -63,3 +65,61 @@ def densified_arcs(vertices: Floats, longest: float) -> tuple[Floats, Floats]:
 def line_length(vertices: Floats) -> float:
     """Length in radians of a line of vertices (m, 3)."""
     return float(angular_distance(vertices[:-1], vertices[1:]).sum()) if len(vertices) > 1 else 0.0
+
+
+def near_pairs(a: Floats, b: Floats, c: Floats, d: Floats) -> tuple[Ints, Ints]:
+    """Numbers of the arcs a-b (n, 3) and c-d (m, 3) that may touch: every pair that does is in it."""
+    from scipy.spatial import cKDTree
+
+    one, its_arc, one_reach = _middles(a, b)
+    other, its_edge, other_reach = _middles(c, d)
+    if not len(one) or not len(other):
+        return np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64)
+    reach = one_reach + other_reach + 1e-9
+    near = cKDTree(one).sparse_distance_matrix(cKDTree(other), reach, output_type="ndarray")
+    pairs = np.unique(np.stack([its_arc[near["i"]], its_edge[near["j"]]]), axis=1)
+    return pairs[0], pairs[1]
+
+
+def _middles(a: Floats, b: Floats) -> tuple[Floats, Ints, float]:
+    """Middles of pieces of arcs, at most a degree long, whose arcs they are, and the longest's half."""
+    pieces = np.maximum(np.ceil(angular_distance(a, b) / np.deg2rad(1.0)), 1).astype(np.int64)
+    owner = np.repeat(np.arange(len(a)), pieces)
+    within = np.arange(len(owner)) - np.repeat(np.cumsum(pieces) - pieces, pieces)
+    count = pieces[owner]
+    ends = [along_arcs(a[owner], b[owner], (within + half) / count) for half in (0.0, 0.5, 1.0)]
+    reach = np.maximum(length(ends[1] - ends[0]), length(ends[2] - ends[1]))
+    return ends[1], owner, float(reach.max(initial=0.0))
+
+
+def along_arcs(a: Floats, b: Floats, fraction: Floats) -> Floats:
+    """Unit vectors (n, 3) at fractions (n,) of the arcs a-b (n, 3), none of them half a turn."""
+    angle = angular_distance(a, b)
+    sine = np.sin(angle)
+    short = sine < 1e-12
+    safe = np.where(short, 1.0, sine)
+    one = np.where(short, 1.0 - fraction, np.sin((1.0 - fraction) * angle) / safe)
+    other = np.where(short, fraction, np.sin(fraction * angle) / safe)
+    made = one[:, np.newaxis] * a + other[:, np.newaxis] * b
+    return made / length(made)[:, np.newaxis]
+
+
+def crossings(a: Floats, b: Floats, c: Floats, d: Floats) -> tuple[NDArray[np.bool_], Floats]:
+    """Whether arcs a-b and c-d (n, 3 each) cross, and where: unit vectors (n, 3), NaN if they do not.
+
+    A point exactly on an arc's great circle counts as left of it, so that a line through a vertex of
+    another crosses it there once, or twice, or not at all where it only touches.
+    """
+    edge, arc = cross(c, d), cross(a, b)
+    before, behind = dot(edge, a), dot(edge, b)
+    start, end = dot(arc, c), dot(arc, d)
+    parted = ((before >= 0.0) != (behind >= 0.0)) & ((start >= 0.0) != (end >= 0.0))
+    weight = np.abs(before) + np.abs(behind)
+    safe = np.where(parted, weight, 1.0)
+    place = (np.abs(behind)[:, np.newaxis] * a + np.abs(before)[:, np.newaxis] * b) / safe[:, np.newaxis]
+    size = length(place)
+    parted &= (size > 0.0) & (dot(place, c + d) > 0.0)
+    place = np.divide(
+        place, size[:, np.newaxis], out=np.full_like(place, np.nan), where=parted[:, np.newaxis]
+    )
+    return parted, place

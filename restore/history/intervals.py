@@ -78,20 +78,21 @@ def joined(pairs: Sequence[Pair]) -> list[Pair]:
     return result
 
 
-Misfit = Callable[[Chain, Chain, float, float], float]
+Misfits = Callable[[Chain, Chain, Floats, Floats], Floats]
+MOST_AHEAD = 512
 
 
 def cut_time(
-    pairs: Sequence[Pair], plates: Sequence[str], frame: str, misfit: Misfit, tolerance_rad: float
+    pairs: Sequence[Pair], plates: Sequence[str], frame: str, misfits: Misfits, tolerance_rad: float
 ) -> Pieces:
     """Cut time at the pairs' ends and find the chains to `frame` in each piece.
 
-    `misfit(one, other, younger_ma, older_ma)`: greatest angle in radians between two chains over
-    ages; chains that differ by no more than `tolerance_rad` count as one.
+    `misfits(one, other, younger_ma, older_ma)`: greatest angles in radians between two chains over
+    spans of age (n,); chains that differ by no more than `tolerance_rad` count as one.
     """
     code = {plate: i for i, plate in enumerate(plates)}
     cuts = np.unique([age for pair in pairs for age in (pair.youngest_ma, pair.oldest_ma)])
-    builder = _ChainBuilder(pairs, code, code[frame], misfit, tolerance_rad)
+    builder = _ChainBuilder(pairs, code, code[frame], _Loops(cuts, misfits), tolerance_rad)
     rows = np.full((2 * len(cuts) + 1, len(plates)), NO_CHAIN, dtype=np.int32)
     starting: dict[float, list[int]] = {}
     ending: dict[float, list[int]] = {}
@@ -99,12 +100,11 @@ def cut_time(
         starting.setdefault(pair.youngest_ma, []).append(i)
         ending.setdefault(pair.oldest_ma, []).append(i)
     for i, cut in enumerate(cuts):
-        older_end = float(cuts[i + 1]) if i + 1 < len(cuts) else float(cut)
         begun, ended = starting.get(float(cut), []), ending.get(float(cut), [])
         builder.forest.fill_in(begun)
-        rows[2 * i + 1] = builder.numbers(float(cut), float(cut))
+        rows[2 * i + 1] = builder.numbers(2 * i + 1)
         builder.forest.change(begun, ended)
-        rows[2 * i + 2] = builder.numbers(float(cut), older_end)
+        rows[2 * i + 2] = builder.numbers(2 * i + 2)
     rows[0, code[frame]] = builder.number_of(())
     columns = np.ascontiguousarray(rows.T)
     return Pieces(cuts, columns, tuple(builder.chains), tuple(builder.conflicts), tuple(builder.closings))
@@ -233,6 +233,28 @@ class _Forest:
         self.moved.add(node)
 
 
+class _Loops:
+    """The misfits of loops by piece, asked for some pieces ahead, for most loops go on."""
+
+    def __init__(self, cuts: Floats, misfits: Misfits) -> None:
+        # piece 2i + 1 is the age cuts[i], piece 2i + 2 goes on to the next cut; none is asked for piece 0
+        self.younger = np.zeros(2 * len(cuts) + 1)
+        self.younger[1::2] = self.younger[2::2] = cuts
+        self.older = np.append(self.younger[1:], self.younger[-1:])
+        self.older[1::2] = cuts
+        self.misfits = misfits
+        self.known: dict[tuple[Chain, Chain], tuple[int, Floats]] = {}
+
+    def misfit(self, one: Chain, other: Chain, piece: int) -> tuple[float, float, float]:
+        """The ages of a piece and the misfit of two chains in it, radians."""
+        first, sizes = self.known.get((one, other), (piece, np.zeros(0)))
+        if not first <= piece < first + len(sizes):
+            ahead = slice(piece, piece + min(max(4, 2 * len(sizes)), MOST_AHEAD))
+            first, sizes = piece, self.misfits(one, other, self.younger[ahead], self.older[ahead])
+            self.known[one, other] = first, sizes
+        return float(self.younger[piece]), float(self.older[piece]), float(sizes[piece - first])
+
+
 class _ChainBuilder:
     """Numbers the chains to the frame in one piece after another, sharing equal ones."""
 
@@ -241,7 +263,7 @@ class _ChainBuilder:
         pairs: Sequence[Pair],
         code: dict[str, int],
         root: int,
-        misfit: Misfit,
+        loops: _Loops,
         tolerance_rad: float,
     ) -> None:
         self.pairs = pairs
@@ -249,7 +271,7 @@ class _ChainBuilder:
         self.ends = [(code[pair.plate], code[pair.relative_to]) for pair in pairs]
         self.forest = _Forest(self.ends, [pair.rank for pair in pairs], len(code), root)
         self.forest.moved.add(root)
-        self.misfit = misfit
+        self.loops = loops
         self.tolerance = tolerance_rad
         self.chains: list[Chain] = []
         self.known: dict[Chain, int] = {}
@@ -266,12 +288,12 @@ class _ChainBuilder:
             self.chains.append(chain)
         return self.known[chain]
 
-    def numbers(self, younger: float, older: float) -> NDArray[np.int32]:
-        """Chain numbers (plates,) in the piece between two ages."""
+    def numbers(self, piece: int) -> NDArray[np.int32]:
+        """Chain numbers (plates,) in a piece, by its number."""
         changed = self._follow()
         hidden: set[int] = set()
         if self.forest.spare:
-            lower = [self.forest.lower_end(p) for p in self._doubtful_pairs(younger, older)]
+            lower = [self.forest.lower_end(p) for p in self._doubtful_pairs(piece)]
             hidden = self.forest.under(node for node in lower if node is not None)
         todo = changed | self.waiting
         self.waiting = {node for node in todo & hidden if self.chain_to[node] is not None}
@@ -320,7 +342,7 @@ class _ChainBuilder:
         rest = self.chain_to[partner]
         return None if rest is None else (Link(pair, self.ends[pair][0] == node), *rest)
 
-    def _doubtful_pairs(self, younger: float, older: float) -> set[int]:
+    def _doubtful_pairs(self, piece: int) -> set[int]:
         """Pairs on loops that do not close and that no rank decides."""
         doubtful: set[int] = set()
         for pair in sorted(self.forest.spare, key=self.forest.order.__getitem__):
@@ -334,7 +356,7 @@ class _ChainBuilder:
             loop = {link.pair for link in (*one, *other)}
             if all(self.pairs[p].rank < self.pairs[pair].rank for p in loop if p != pair):
                 continue
-            size = self.misfit(one, other, younger, older)
+            younger, older, size = self.loops.misfit(one, other, piece)
             closes = size <= self.tolerance
             loops = self.closings if closes else self.conflicts
             loops.append(Conflict(younger, older, self.names[plate], one, other, size))

@@ -16,6 +16,7 @@ import numpy as np
 from restore.errors import HistoryError, InputError, raise_faults
 from restore.findings import Finding, Place
 from restore.geometry.sphere import EARTH_RADIUS_KM, Floats
+from restore.history.conventions import Table
 from restore.history.links import Pair, Stages, pairs_of
 from restore.history.store import History
 from restore.history.timescale import Chron, Restatement, TimeScale
@@ -64,7 +65,10 @@ def redate(history: History, to: TimeScale, default_from: TimeScale | None = Non
     _move_together(history, pairs, ages, how, findings)
     _check_order(history, pairs, ages, findings)
     raise_faults(HistoryError, findings)
-    tables = tuple(replace(table, time_scale=to.name) for table in history.tables)
+    tables = tuple(
+        _with_limits(replace(table, time_scale=to.name), history.rows.age_ma[own], ages[own])
+        for table, own in ((t, history.rows.table == i) for i, t in enumerate(history.tables))
+    )
     rows = replace(history.rows, age_ma=ages)
     km = _sizes(history, pairs, ages)
     moved = tuple(
@@ -87,7 +91,7 @@ def _restate_table(
 ) -> None:
     table = history.tables[number]
     clock = TimeScale.read(table.time_scale) if table.time_scale else default_from
-    if clock is not None and clock.name == to.name:
+    if clock is not None and (clock.name == to.name or clock.same_as(to)):
         return
     restatement: Restatement | None = None
     for row in np.flatnonzero((history.rows.table == number) & (history.rows.age_ma > 0.0)):
@@ -95,7 +99,7 @@ def _restate_table(
         if not math.isnan(age):
             ages[row], how[row] = age, "chron"
             continue
-        place = Place(table.file, int(history.rows.line[row]) or None)
+        place = _place(history, int(row))
         before = float(history.rows.age_ma[row])
         if clock is None:
             what = f"age {before:g} Ma has no chron and its table names no time scale"
@@ -123,36 +127,70 @@ def _age_by_chron(text: str, to: TimeScale) -> float:
         return math.nan
 
 
+def _with_limits(table: Table, before: Floats, after: Floats) -> Table:
+    """The table with the ages between which it is meant carried along with its rows."""
+    order = np.argsort(before, kind="stable")
+    known, moved = before[order], after[order]
+
+    def carried(limit: float) -> float:
+        if not len(known) or not 0.0 < limit < math.inf:
+            return limit
+        nearest = min(max(limit, float(known[0])), float(known[-1]))
+        return max(float(np.interp(nearest, known, moved)) + (limit - nearest), 0.0)
+
+    young, old = carried(table.valid_from_ma), carried(table.valid_to_ma)
+    return replace(table, valid_from_ma=young, valid_to_ma=old)
+
+
+def _place(history: History, row: int) -> Place:
+    return Place(history.tables[int(history.rows.table[row])].file, int(history.rows.line[row]) or None)
+
+
 def _move_together(
     history: History, pairs: list[Pair], ages: Floats, how: list[str], findings: list[Finding]
 ) -> None:
     """Give rows that touch at a change of partner one age: the one by chron where either has one."""
-    before = history.rows.age_ma
-    ends: dict[tuple[str, float], list[int]] = {}
-    for pair in pairs:
-        for row in {int(pair.rows[0]), int(pair.rows[-1])}:
-            if row >= 0 and before[row] > 0.0:
-                ends.setdefault((pair.plate, float(before[row])), []).append(row)
-    for (plate, age), rows in ends.items():
-        if len(rows) < 2:
-            continue
+    for plate, age, rows in _touching(history, pairs):
         by_chron = [row for row in rows if how[row] == "chron"]
         leading = by_chron[0] if by_chron else rows[0]
         for row in by_chron[1:]:
             if ages[row] != ages[leading]:
-                place = Place(
-                    history.tables[int(history.rows.table[row])].file, int(history.rows.line[row])
-                )
                 what = (
                     f"{plate} changes its partner at {age:g} Ma, where two chrons say"
                     f" {ages[leading]:g} and {ages[row]:g} Ma"
                 )
+                remedy = "give both rows one chron"
                 findings.append(
-                    Finding("error", "chrons differ", place, what, remedy="give both rows one chron")
+                    Finding("error", "chrons differ", _place(history, row), what, remedy=remedy)
                 )
         for row in rows:
             if row not in by_chron and ages[row] != ages[leading]:
                 ages[row], how[row] = ages[leading], "with its neighbour"
+
+
+def _touching(history: History, pairs: list[Pair]) -> list[tuple[str, float, list[int]]]:
+    """Rows at the ends of pairs of one plate that have one age: plate, age, row numbers.
+
+    A pair that lists the plate as the side held still belongs to them where it goes on from another.
+    """
+    before = history.rows.age_ma
+    ends: dict[tuple[str, float], list[tuple[int, bool, bool]]] = {}
+    for pair in pairs:
+        for row, oldest in ((int(pair.rows[0]), False), (int(pair.rows[-1]), True)):
+            if row >= 0 and before[row] > 0.0:
+                for label, moves in ((pair.plate, True), (pair.relative_to, False)):
+                    ends.setdefault((label, float(before[row])), []).append((row, moves, oldest))
+    group_of: dict[int, tuple[str, float, dict[int, None]]] = {}
+    for (plate, age), found in ends.items():
+        own = {oldest for _, moves, oldest in found if moves}
+        rows = {row: None for row, moves, oldest in found if moves or (not oldest) in own}
+        if own and len(rows) > 1:
+            # rows that touch those of another plate as well must go with them all
+            for row in list(rows):
+                rows |= group_of[row][2] if row in group_of else {}
+            group_of.update(dict.fromkeys(rows, (plate, age, rows)))
+    groups = {id(group): group for group in group_of.values()}.values()
+    return [(plate, age, list(rows)) for plate, age, rows in groups]
 
 
 def _check_order(history: History, pairs: list[Pair], ages: Floats, findings: list[Finding]) -> None:
@@ -160,10 +198,7 @@ def _check_order(history: History, pairs: list[Pair], ages: Floats, findings: li
         numbers = pair.rows[pair.rows >= 0]
         for younger, older in itertools.pairwise(numbers):
             if not ages[older] > ages[younger]:
-                place = Place(
-                    history.tables[int(history.rows.table[older])].file,
-                    int(history.rows.line[older]) or None,
-                )
+                place = _place(history, int(older))
                 what = (
                     f"{pair.plate} relative to {pair.relative_to}: restated, this row is at"
                     f" {ages[older]:g} Ma and its younger neighbour at {ages[younger]:g} Ma"
@@ -193,9 +228,9 @@ def one_clock(history: History, to: TimeScale) -> Redated:
     and remarked upon.
     """
     silent = [table for table in history.tables if not table.time_scale]
-    others = [t for t in history.tables if t.time_scale and t.time_scale != to.name]
+    others = [number for number, table in enumerate(history.tables) if _is_on_another(table, to)]
     findings = []
-    if silent and (others or any(t.time_scale for t in history.tables)):
+    if len(silent) < len(history.tables):
         for table in silent:
             what = f"the table names no time scale; its ages are taken as {to.name}"
             place = Place(table.file)
@@ -203,22 +238,25 @@ def one_clock(history: History, to: TimeScale) -> Redated:
     if not others:
         return Redated(history, (), tuple(findings))
     done = redate(history, to, to)
-    worst: dict[int, Moved] = {}
-    for moved in done.moved:
-        table_number = int(history.rows.table[moved.row])
-        if moved.km > worst.get(table_number, moved).km or table_number not in worst:
-            worst[table_number] = moved
-    for number, moved in sorted(worst.items()):
-        if history.tables[number].time_scale in {"", to.name}:
-            continue
+    for number in others:
         table = history.tables[number]
+        own = [moved for moved in done.moved if int(history.rows.table[moved.row]) == number]
+        if not own:
+            continue
+        moved = max(own, key=lambda m: (m.km, abs(m.after_ma - m.before_ma)))
         what = (
             f"restated from {table.time_scale} to {to.name}: up to"
             f" {abs(moved.after_ma - moved.before_ma):.3g} Myr (row of {moved.before_ma:g} Ma)"
         )
-        place = Place(table.file, int(history.rows.line[moved.row]) or None)
+        place = _place(history, moved.row)
         findings.append(Finding("note", "restated", place, what, moved.km, ""))
     return Redated(done.history, done.moved, (*findings, *done.findings))
+
+
+def _is_on_another(table: Table, to: TimeScale) -> bool:
+    if table.time_scale in {"", to.name}:
+        return False
+    return not TimeScale.read(table.time_scale).same_as(to)
 
 
 def clock_of(history: History, name: str | None, folder: str = ".") -> TimeScale | None:

@@ -9,16 +9,16 @@ from __future__ import annotations
 import math
 import os
 import re
-from collections.abc import Mapping
+from collections.abc import Container, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from restore.errors import InputError, TableError
-from restore.files.delimited import DelimitedReader, Layout, parse_number
-from restore.findings import did_you_mean
+from restore.errors import InputError, TableError, raise_faults
+from restore.files.delimited import Chunk, DelimitedReader, Layout, parse_number
+from restore.findings import Finding, did_you_mean
 from restore.geometry.sphere import Floats
 
 LONG_INTERVAL_MYR = 5.0
@@ -31,7 +31,7 @@ SOURCES = {
     "cent94": "Channell, Erba, Nakanishi & Tamaki 1995, SEPM Spec. Publ. 54, 51-63 (read)",
     "kg86": "Kent & Gradstein 1986, The Geology of North America M (read)",
 }
-_EDGE = re.compile(r"^(?P<chron>[^()]+?)\s*(?:\((?P<edge>y|o|[01]|0?\.[0-9]+)\))?$")
+_EDGE = re.compile(r"^(?P<chron>[^()]+?)\s*(?:\((?P<edge>y|o|0|1|[01]\.[0-9]*|\.[0-9]+)\))?$")
 
 
 @dataclass(frozen=True)
@@ -48,20 +48,23 @@ class Chron:
         Raises InputError if there is neither an edge nor a fraction, or both.
         """
         found = _EDGE.match(text.strip())
-        edge = found["edge"] if found else None
-        if found is None or (edge is None and math.isnan(fraction)):
+        if found is None:
+            raise InputError(f"chron {text!r}: write name(y), name(o) or name(0.5), from the young edge")
+        edge = found["edge"]
+        if edge is None and math.isnan(fraction):
             raise InputError(f"chron {text!r}: say which edge, {text}(y) or {text}(o), or a chron_fraction")
         if edge is not None and not math.isnan(fraction):
             raise InputError(f"chron {text!r} has an edge and chron_fraction = {fraction:g}: give one")
-        if edge is None and not 0.0 <= fraction <= 1.0:
-            raise InputError(f"chron_fraction = {fraction:g}: must lie in 0..1, from the young edge")
         if edge is not None:
             fraction = {"y": 0.0, "o": 1.0}[edge] if edge in "yo" else float(edge)
+        if not 0.0 <= fraction <= 1.0:
+            raise InputError(f"chron_fraction = {fraction:g}: must lie in 0..1, from the young edge")
         return cls(found["chron"], fraction)
 
     def __str__(self) -> str:
-        edge = {0.0: "y", 1.0: "o"}.get(self.fraction, f"{self.fraction:g}")
-        return f"{self.name}({edge})"
+        edge = {0.0: "y", 1.0: "o"}.get(self.fraction)
+        # short, and yet read back as the same number
+        return f"{self.name}({edge or np.format_float_positional(self.fraction, trim='-')})"
 
 
 @dataclass(frozen=True)
@@ -82,10 +85,16 @@ class TimeScale:
             path = Path(__file__).parent / "scales" / f"{name}.csv"
             return cls(name, SOURCES[name], _read_chrons(path, Layout(comment="#")))
         path = Path(folder) / name
-        if path.suffix or path.exists():
+        if path.is_file():
             return cls(name, os.fspath(path), _read_chrons(path, Layout(comment="#")))
         hint = did_you_mean(name, SOURCES)
-        raise InputError(f"time scale {name!r} is not known; {hint}, or name a table chron,young_ma,old_ma")
+        raise InputError(
+            f"time scale {name!r} is neither known nor a file; {hint}, or name a table chron,young_ma,old_ma"
+        )
+
+    def same_as(self, other: TimeScale) -> bool:
+        """Whether two scales date the same reversals alike, whatever they are called."""
+        return self.edges() == other.edges()
 
     def age_of(self, chron: Chron) -> float:
         """The age of a chron's edge or of a place inside it, Ma.
@@ -115,33 +124,62 @@ class TimeScale:
         return known
 
 
+COLUMNS = ("chron", "young_ma", "old_ma")
+
+
 def _read_chrons(path: Path, layout: Layout) -> dict[str, tuple[float, float]]:
+    """The chrons of a table; raises TableError with one line per fault, all faults at once."""
+    chrons: dict[str, tuple[float, float]] = {}
+    findings: list[Finding] = []
     with DelimitedReader(path, layout) as reader:
-        at = {name: reader.column(name) for name in ("chron", "young_ma", "old_ma")}
-        (chunk,) = reader.chunks(size=2**62)
-        chrons: dict[str, tuple[float, float]] = {}
+        at = [reader.column(name) or 0 for name in COLUMNS]
         before = -math.inf
-        for row in range(len(chunk)):
-            texts = {name: chunk.columns[i][row].strip() for name, i in at.items() if i is not None}
-            name = texts["chron"]
-            try:
-                young, old = (parse_number(texts[n], layout.decimal) for n in ("young_ma", "old_ma"))
-            except ValueError as exc:
-                raise TableError(f"{chunk.place(row)}: {str(exc)!r} is not a number") from None
-            if not name:
-                raise TableError(f"{chunk.place(row, 0)}: chron is empty; every row names one")
-            if name in chrons:
-                raise TableError(f"{chunk.place(row, 0)}: chron {name!r} stands twice; keep one row")
-            if not 0.0 <= young < math.inf or old <= young or young < before:
-                raise TableError(
-                    f"{chunk.place(row)}: {name} {young:g}..{old:g} Ma: ages rise down the table, the"
-                    " young edge before the old one"
-                )
-            before = young if math.isnan(old) else old
-            chrons[name] = (young, old)
+        for chunk in reader.chunks():
+            for row in range(len(chunk)):
+                fault = reader.length_fault(chunk, row) or _chron_fault(chunk, row, at, chrons, before)
+                if isinstance(fault, Finding):
+                    findings.append(fault)
+                    continue
+                name, young, old = fault
+                before = young if math.isnan(old) else old
+                chrons[name] = (young, old)
+    raise_faults(TableError, findings)
     if not chrons:
         raise TableError(f"{path}: no chrons; a time scale needs at least one")
     return chrons
+
+
+def _chron_fault(
+    chunk: Chunk, row: int, at: Sequence[int], known: Container[str], before: float
+) -> Finding | tuple[str, float, float]:
+    """Name, young and old edge of a row, or what is wrong with it."""
+
+    def fault(column: int, what: str, remedy: str) -> Finding:
+        return Finding("error", "time scale", chunk.place(row, at[column]), what, remedy=remedy)
+
+    name, *texts = (chunk.columns[column][row].strip() for column in at)
+    if not name:
+        return fault(0, "chron is empty", "every row names one")
+    if name in known:
+        return fault(0, f"chron {name!r} stands twice", "keep one row")
+    edges = []
+    for column, text in enumerate(texts, start=1):
+        try:
+            edges.append(parse_number(text))
+        except ValueError:
+            edges.append(math.inf)
+        if math.isinf(edges[-1]):
+            return fault(column, f"{COLUMNS[column]} = {text!r}", "an age is a finite number, in Ma")
+    young, old = edges
+    if math.isnan(young):
+        return fault(1, "young_ma is empty", "only old_ma may be, where it is not known")
+    if not (young >= 0.0 and before <= young):
+        rule = "ages are not negative and rise down the table"
+        return fault(1, f"young_ma = {texts[0]} of {name} after {max(before, 0.0):g} Ma", rule)
+    if old <= young:
+        rule = "the old edge is older than the young one"
+        return fault(2, f"old_ma = {texts[1]} of {name} with young_ma = {texts[0]}", rule)
+    return name, young, old
 
 
 @dataclass(frozen=True, eq=False)

@@ -7,11 +7,14 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from restore.errors import InputError
 from restore.files.rasters import Field
 from restore.findings import Finding
 from restore.geometry.sphere import Floats
 from restore.motion.site_table import SiteTable
 from restore.outlines import Outlines
+
+MILLIONS_OF_YEARS = frozenset({"ma", "myr", "my", "m.y.", "mya", "million years", "1e6 year", "1e6 years"})
 
 
 @dataclass(eq=False)
@@ -56,6 +59,16 @@ class Ground:
     outlines: Outlines | None = None
     crust: Field | None = None
     within_km: float = 0.0
+
+    def __post_init__(self) -> None:
+        if self.crust is None:
+            return
+        name, units = self.crust.name, self.crust.units
+        if units and units.lower() not in MILLIONS_OF_YEARS:
+            raise InputError(f"crustal ages {name!r}: units {units!r}; they are wanted in Ma or Myr")
+        if np.any(self.crust.values < 0.0):
+            least = np.nanmin(self.crust.values)
+            raise InputError(f"crustal ages {name!r}: {least:g} Ma; ages are positive, gaps are NaN")
 
     def place(self, table: SiteTable) -> Placing:
         """The plates and crust of the sites of a table."""

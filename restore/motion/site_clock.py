@@ -26,7 +26,7 @@ class SiteClock:
     def __init__(self, to: TimeScale, own: TimeScale | None = None) -> None:
         self.to = to
         self.restatement = None
-        if own is not None and own.name != to.name:
+        if own is not None and own.name != to.name and not own.same_as(to):
             self.restatement = Restatement.between(own, to)
 
     def restate(
@@ -36,6 +36,7 @@ class SiteClock:
         numbers: dict[str, Floats],
         bad_age: NDArray[np.bool_],
         findings: list[Finding],
+        decimal: str = ".",
     ) -> list[str]:
         """Restate `numbers` in place and say for each row how its own age came about.
 
@@ -48,7 +49,7 @@ class SiteClock:
                 self._interpolate(name, chunk, at, numbers, bad_age, findings, how)
         column = at.get("chron")
         if column is not None:
-            self._by_chron(chunk, at, column, numbers, bad_age, findings, how)
+            self._by_chron(chunk, at, column, numbers, bad_age, findings, how, decimal)
         return how
 
     def _interpolate(
@@ -87,6 +88,7 @@ class SiteClock:
         bad_age: NDArray[np.bool_],
         findings: list[Finding],
         how: list[str],
+        decimal: str,
     ) -> None:
         fractions = at.get("chron_fraction")
         ages = np.array(numbers["age_ma"])
@@ -95,7 +97,7 @@ class SiteClock:
                 continue
             try:
                 said = "" if fractions is None else chunk.columns[fractions][row]
-                fraction = parse_number(said) if said.strip() else math.nan
+                fraction = parse_number(said, decimal) if said.strip() else math.nan
                 ages[row], how[row] = self.to.age_of(Chron.parse(text, fraction)), "chron"
             except (InputError, ValueError) as exc:
                 bad_age[row] = True

@@ -7,12 +7,15 @@ from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from restore.files.delimited import Chunk, DelimitedReader, Layout, parse_numbers
 from restore.files.tables import TableOut
 from restore.findings import Finding
+from restore.geometry.sphere import Floats
 from restore.history.timescale import TimeScale
 from restore.motion.site_clock import AGES, SiteClock
+from restore.motion.site_table import KNOWN_COLUMNS
 
 ADDED = ("age_before_ma", "age_moved_myr", "redated_by", "loose")
 
@@ -35,11 +38,12 @@ def redate_sites(
     clock = SiteClock(to, own)
     findings: list[Finding] = []
     with DelimitedReader(table, layout) as reader, TableOut(out, provenance) as target:
+        reader.expect(KNOWN_COLUMNS)
         at = {name: reader.column(name, required=False) for name in (*AGES, "chron", "chron_fraction")}
         if at["age_ma"] is None and at["chron"] is None and at["age_old_ma"] is None:
             reader.column("age_ma")
         for chunk in reader.chunks():
-            target.add(_restated(chunk, at, clock, reader, findings))
+            target.add(_restated(chunk, at, clock, own is not None, reader, findings))
     return findings
 
 
@@ -47,19 +51,17 @@ def _restated(
     chunk: Chunk,
     at: Mapping[str, int | None],
     clock: SiteClock,
+    has_own: bool,
     reader: DelimitedReader,
     findings: list[Finding],
 ) -> dict[str, Any]:
-    numbers = {}
-    bad = np.zeros(len(chunk), dtype=bool)
-    line_of = {line: row for row, line in enumerate(chunk.lines)}
-    for name in AGES:
-        values, faults = parse_numbers(chunk, at[name], name, reader.layout.decimal)
-        numbers[name] = np.array(values)
-        findings += faults
-        bad[[line_of[fault.place.line or 0] for fault in faults]] = True
+    found: list[Finding] = []
+    numbers, bad = _parsed(chunk, at, reader, found)
+    if not has_own:
+        _check_clock(chunk, at, numbers, bad, found)
     before = dict(numbers)
-    how = clock.restate(chunk, at, numbers, bad, findings)
+    how = clock.restate(chunk, at, numbers, bad, found, reader.layout.decimal)
+    findings += sorted(found, key=lambda fault: (fault.place.line or 0, fault.place.column or 0))
     columns: dict[str, Any] = dict(zip(chunk.header, chunk.columns, strict=True))
     for name in AGES:
         column = at[name]
@@ -77,3 +79,46 @@ def _restated(
         bool(flag) and said == "interpolated" for flag, said in zip(loose, how, strict=True)
     ]
     return columns
+
+
+def _parsed(
+    chunk: Chunk, at: Mapping[str, int | None], reader: DelimitedReader, findings: list[Finding]
+) -> tuple[dict[str, Floats], NDArray[np.bool_]]:
+    """The ages (Ma) by column, and the rows that are at fault."""
+    bad = np.zeros(len(chunk), dtype=bool)
+    for row in (*chunk.surplus, *chunk.short):
+        wrong_length = reader.length_fault(chunk, row)
+        findings += [] if wrong_length is None else [wrong_length]
+        bad[row] = True
+    slipped = bad.copy()
+    numbers = {}
+    line_of = {line: row for row, line in enumerate(chunk.lines)}
+    for name in AGES:
+        values, faults = parse_numbers(chunk, at[name], name, reader.layout.decimal)
+        numbers[name] = np.array(values, dtype=np.float64)
+        for fault in faults:
+            row = line_of[fault.place.line or 0]
+            bad[row] = True
+            findings += [] if slipped[row] else [fault]
+    return numbers, bad
+
+
+def _check_clock(
+    chunk: Chunk,
+    at: Mapping[str, int | None],
+    numbers: Mapping[str, Floats],
+    bad: NDArray[np.bool_],
+    findings: list[Finding],
+) -> None:
+    """Ages that neither a chron nor a time scale of the table dates."""
+    column = at["chron"]
+    chrons = [""] * len(chunk) if column is None else chunk.columns[column]
+    for name in AGES:
+        for row in np.flatnonzero(~np.isnan(numbers[name]) & (numbers[name] != 0.0) & ~bad):
+            if name == "age_ma" and chrons[row].strip():
+                continue
+            bad[row] = True
+            what = f"{name} = {numbers[name][row]:g} has no chron and the table names no time scale"
+            place = chunk.place(int(row), at[name])
+            remedy = "say which clock its ages are on (--from)"
+            findings.append(Finding("error", "no clock", place, what, remedy=remedy))

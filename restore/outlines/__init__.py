@@ -17,10 +17,12 @@ from restore.files.vectors import Feature, read_features
 from restore.findings import did_you_mean
 from restore.geometry.latitudes import Latitudes
 from restore.geometry.polygons import Polygon, Ring, SortedPoints, densified
-from restore.geometry.sphere import EARTH_RADIUS_KM, Floats
+from restore.geometry.sphere import EARTH_RADIUS_KM, Floats, cross, length
 
 EDGES = ("great-circle", "straight")
 STRAIGHT_WITHIN_KM = 0.01
+ANTIPODES = 1e-10
+ON_ONE_CIRCLE = 1e-14
 
 
 @dataclass(frozen=True, eq=False)
@@ -98,9 +100,11 @@ class Outlines:
         """The outline on which each of today's points (degrees, `(n,)`) lies.
 
         Exact on the sphere; a point on an edge or vertex that outlines share is on exactly one. Points
-        on none go to the nearest outline within `within_km`.
+        on none go to the nearest outline within `within_km`. A point of which a coordinate is NaN, or
+        a latitude beyond the poles, is on none.
         """
-        lat = self.latitudes.inward(lat_deg)
+        given = np.asarray(lat_deg, dtype=np.float64)
+        lat = self.latitudes.inward(np.where(np.abs(given) <= 90.0, given, np.nan))
         points = SortedPoints(lat, lon_deg)
         best = np.full(len(points), -1, dtype=np.int64)
         rank = np.full(len(points), np.iinfo(np.int64).max)
@@ -125,7 +129,7 @@ class Outlines:
         from restore.geometry.arcs import nearest_on_edges
         from restore.geometry.sphere import unit_vectors
 
-        lost = np.flatnonzero(outline < 0)
+        lost = np.flatnonzero((outline < 0) & np.isfinite(lat) & np.isfinite(lon))
         if not len(lost):
             return
         places = unit_vectors(lat[lost], lon[lost])
@@ -149,28 +153,56 @@ class Outlines:
 
 
 def _outline(feature: Feature, plate_property: str, edges: str, latitudes: Latitudes) -> Outline:
-    properties = feature.properties
-    label = properties.get(plate_property)
-    if label is None or str(label) == "":
-        hint = did_you_mean(plate_property, map(str, properties))
-        raise InputError(f"{feature}: has no property {plate_property!r}; {hint}".rstrip("; "))
+    properties = _with_short_names(feature)
+    label = _label(feature, plate_property)
     geometry = feature.geometry
     kind = None if geometry is None else geometry["type"]
     if geometry is None or kind not in {"Polygon", "MultiPolygon"}:
         raise InputError(f"{feature}: geometry {kind!r}: an outline is a Polygon or a MultiPolygon")
     parts = geometry["coordinates"] if kind == "MultiPolygon" else [geometry["coordinates"]]
+    if not parts:
+        raise InputError(f"{feature}: a {kind} without a polygon")
     polygons = tuple(_polygon(feature, part, edges, latitudes) for part in parts)
     repeated = sum(
         list(one[:2]) == list(other[:2]) for part in parts for ring in part for one, other in pairwise(ring)
     )
-    rank = properties.get("rank", 0)
-    if not isinstance(rank, (int, np.integer)) or isinstance(rank, bool):
-        raise InputError(f"{feature}: rank = {rank!r}: must be a whole number")
+    rank = _rank(feature, properties)
     oldest = _age(feature, properties, "oldest_ma", math.inf)
     youngest = _age(feature, properties, "youngest_ma", 0.0)
     if youngest > oldest:
         raise InputError(f"{feature}: youngest_ma = {youngest:g} is above oldest_ma = {oldest:g}")
-    return Outline(str(label), polygons, oldest, youngest, int(rank), feature.number, repeated)
+    return Outline(label, polygons, oldest, youngest, rank, feature.number, repeated)
+
+
+def _with_short_names(feature: Feature) -> Mapping[str, Any]:
+    """The properties, with `youngest_ma` by its full name: a Shapefile's names have ten letters."""
+    properties = dict(feature.properties)
+    if feature.file.lower().endswith(".shp") and "youngest_m" in properties:
+        properties.setdefault("youngest_ma", properties["youngest_m"])
+    return properties
+
+
+def _label(feature: Feature, plate_property: str) -> str:
+    label = feature.properties.get(plate_property)
+    if isinstance(label, (float, np.floating)) and float(label).is_integer():
+        label = int(label)  # where other features have none, tables keep whole numbers as floats
+    if label is None or str(label).strip() == "":
+        hint = did_you_mean(plate_property, map(str, feature.properties)) if label is None else ""
+        said = "has no property" if label is None else "has an empty property"
+        raise InputError(f"{feature}: {said} {plate_property!r}; {hint}".rstrip("; "))
+    if isinstance(label, (dict, list, tuple, bool)):
+        raise InputError(f"{feature}: {plate_property} = {label!r}: a plate's label is a text")
+    return str(label).strip()
+
+
+def _rank(feature: Feature, properties: Mapping[str, Any]) -> int:
+    rank = properties.get("rank")
+    if rank is None:
+        return 0
+    whole = isinstance(rank, (int, float, np.integer, np.floating)) and float(rank).is_integer()
+    if not whole or isinstance(rank, bool):
+        raise InputError(f"{feature}: rank = {rank!r}: must be a whole number")
+    return int(rank)
 
 
 def _age(feature: Feature, properties: Mapping[str, Any], name: str, default: float) -> float:
@@ -198,7 +230,25 @@ def _polygon(feature: Feature, rings: Sequence[Any], edges: str, latitudes: Lati
         one = Ring.of(latitudes.inward(lat), lon)
         if len(one) < 3:
             raise InputError(f"{feature}: ring {number} has {len(one)} different vertices; it needs three")
+        _check_ring(feature, number, one)
         made.append(one)
     if not made:
         raise InputError(f"{feature}: a polygon without a ring")
     return Polygon.of(tuple(made))
+
+
+def _check_ring(feature: Feature, number: int, ring: Ring) -> None:
+    """Raise InputError for edges that have no one course and for rings that hold no area."""
+    v = ring.vectors()
+    opposite = np.flatnonzero(length(v + np.roll(v, -1, axis=0)) < ANTIPODES)
+    if len(opposite):
+        at = f"{ring.lon_deg[opposite[0]]:g}, {ring.lat_deg[opposite[0]]:g}"
+        raise InputError(
+            f"{feature}: ring {number}: the edge from {at} ends at its antipode; put a vertex between"
+        )
+    normal = cross(v, np.roll(v, -1, axis=0))
+    longest = normal[np.argmax(length(normal))]
+    on_one_circle = np.all(np.abs(v @ longest) <= ON_ONE_CIRCLE * length(longest))
+    # a hemisphere's vertices lie on one circle too, and there is an area to the left of them
+    if on_one_circle and not math.pi < ring.area_sr() < 3.0 * math.pi:
+        raise InputError(f"{feature}: ring {number} holds no area; its edges lie on one another")

@@ -36,7 +36,8 @@ def _place(file: str, outline: Outline) -> Place:
 def _of_one(file: str, outline: Outline) -> Iterator[Finding]:
     place = _place(file, outline)
     if outline.repeated > 0:
-        what = f"{outline.plate}: {outline.repeated} vertices repeat their neighbour"
+        some = "vertex repeats its" if outline.repeated == 1 else "vertices repeat their"
+        what = f"{outline.plate}: {outline.repeated} {some} neighbour"
         yield Finding("note", "repeated vertices", place, what, remedy="they are passed over")
     for number, polygon in enumerate(outline.polygons, start=1):
         part = f"{outline.plate}, part {number}" if len(outline.polygons) > 1 else outline.plate
@@ -55,7 +56,8 @@ def _of_one(file: str, outline: Outline) -> Iterator[Finding]:
             crossings = self_crossings(ring)
             if len(crossings):
                 lat, lon = crossings[0]
-                what = f"{part}: the ring crosses itself {len(crossings)} times, first near {lat:.4f}, {lon:.4f}"
+                times = "once" if len(crossings) == 1 else f"{len(crossings)} times, first"
+                what = f"{part}: the ring crosses itself {times} near {lat:.4f}, {lon:.4f}"
                 yield Finding("error", "self-crossing", place, what, remedy="mend the ring")
 
 
@@ -92,11 +94,12 @@ def _crossings(a: Floats, b: Floats, c: Floats, d: Floats) -> list[tuple[float, 
     sides = (across[0] * across[1] < 0.0) & (across[2] * across[3] < 0.0)
     sides &= np.all(np.abs(across) > TOUCHING, axis=0)
     found = []
-    for normal in others[sides]:
+    for normal, ends in zip(others[sides], (c + d)[sides], strict=True):
         place = np.cross(own, normal)
         place *= np.sign(place @ (a + b))
-        lat, lon = lat_lon(place)
-        found.append((float(lat), float(lon)))
+        if place @ ends > 0.0:  # the arcs may also be at the two places opposite where their circles cross
+            lat, lon = lat_lon(place)
+            found.append((float(lat), float(lon)))
     return found
 
 

@@ -6,7 +6,8 @@ from restore.errors import InputError
 from restore.findings import Finding, did_you_mean
 from restore.history.store import History
 from restore.history.timescale import TimeScale
-from restore.scenario.schema import RatesTask, Scenario, SitesTask
+from restore.scenario.kinds import SitesTask
+from restore.scenario.schema import Scenario
 
 Path = tuple[str | int, ...]
 
@@ -17,9 +18,9 @@ def label_faults(scenario: Scenario, history: History) -> list[Finding]:
     root = scenario.root
     named: list[tuple[tuple[str | int, ...], str]] = [(("frame", "name"), root.frame.name)]
     for index, task in enumerate(scenario.tasks):
-        if isinstance(task, RatesTask):
-            named.append((("task", index, "plate"), task.plate))
-            named.append((("task", index, "relative_to"), task.relative_to))
+        for key, label in task.labels().items():
+            parts = (int(part) if part.isdigit() else part for part in key.split("."))
+            named.append((("task", index, *parts), label))
     findings = []
     for path, label in named:
         if label not in known:

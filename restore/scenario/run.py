@@ -13,25 +13,15 @@ from typing import Any
 from restore.errors import InputError, OncewhereError, ScenarioError, raise_faults
 from restore.files.atomic import whole_file
 from restore.files.delimited import DelimitedReader
-from restore.files.points import beside, read_points
-from restore.files.tables import TableOut, csv_text, texts
+from restore.files.tables import csv_text, texts
 from restore.findings import Finding, Place
-from restore.geometry.latitudes import Latitudes
 from restore.history.audit import audit
 from restore.history.circuit import Circuit
 from restore.history.ledger import Segment, entries
-from restore.history.store import History
-from restore.history.timescale import TimeScale
-from restore.motion.ages import parse_ages
-from restore.motion.draws import Draws
-from restore.motion.ground import Ground
-from restore.motion.rates import rates
-from restore.motion.site_clock import SiteClock
-from restore.motion.site_files import restore_file
-from restore.motion.sites import SiteJob
 from restore.outlines.audit import audit_outlines
 from restore.scenario.faults import clock_faults, label_faults
 from restore.scenario.inputs import ground_of, on_the_clock, read_scenario_history
+from restore.scenario.kinds import Task
 from restore.scenario.provenance import (
     CAUTION,
     command_line,
@@ -40,7 +30,8 @@ from restore.scenario.provenance import (
     sha256_of,
     versions,
 )
-from restore.scenario.schema import RatesTask, Scenario, SitesTask, read_scenario
+from restore.scenario.schema import read_scenario
+from restore.scenario.tasks import Bench, do_task
 
 RECORD = "run.json"
 
@@ -86,7 +77,9 @@ def run_scenario(
         run.findings += audit_outlines(ground.outlines, history)
     history, clock, remarks = on_the_clock(scenario, history)
     run.findings += remarks
-    runner = _Runner(scenario, history, run, threads, before, clock, ground)
+    circuit = Circuit(history, scenario.root.frame.name, scenario.root.conventions.beyond)
+    bench = Bench(scenario, history, circuit, clock, ground, folder, threads)
+    runner = _Runner(bench, run, before)
     runner.write_record()
     for task in scenario.tasks:
         kept = runner.unchanged(task)
@@ -134,27 +127,13 @@ def _finding(record: Mapping[str, Any]) -> Finding:
 class _Runner:
     """Does the tasks of one run and keeps its record."""
 
-    def __init__(
-        self,
-        scenario: Scenario,
-        history: History,
-        run: Run,
-        threads: int,
-        before: dict[str, Any],
-        clock: TimeScale | None,
-        ground: Ground | None,
-    ) -> None:
+    def __init__(self, bench: Bench, run: Run, before: dict[str, Any]) -> None:
+        self.bench = bench
         self.before = before
-        self.clock = clock
-        self.ground = ground
         self.keeps = False
-        self.scenario = scenario
-        self.history = history
+        self.scenario = bench.scenario
         self.run = run
-        self.threads = threads
-        root = scenario.root
-        self.circuit = Circuit(history, root.frame.name, root.conventions.beyond)
-        self.latitudes = Latitudes(root.conventions.latitudes)
+        scenario, history = bench.scenario, bench.history
         tables = [] if scenario.history_file.endswith((".nc", ".nc4")) else history.tables
         files = [scenario.history_file, *(table.file for table in tables)]
         self.history_inputs = [file for file in files if file]
@@ -163,7 +142,7 @@ class _Runner:
         self.segments: dict[Segment, None] = {}
         self.began = time.time()
 
-    def settings(self, task: SitesTask | RatesTask) -> dict[str, Any]:
+    def settings(self, task: Task) -> dict[str, Any]:
         """All that decides a task's result besides its inputs."""
         root = self.scenario.root
         return {
@@ -176,12 +155,12 @@ class _Runner:
             "task": task.model_dump(),
         }
 
-    def inputs(self, task: SitesTask | RatesTask) -> list[str]:
+    def inputs(self, task: Task) -> list[str]:
         """The files behind a task."""
-        ground = self.ground_inputs if isinstance(task, SitesTask) else []
-        return [self.scenario.path(task.file), *self.history_inputs, *ground]
+        named = [self.scenario.path(name) for name in (task.file, *task.more_files().values())]
+        return [*named, *self.history_inputs, *self.ground_inputs]
 
-    def unchanged(self, task: SitesTask | RatesTask) -> dict[str, Any] | None:
+    def unchanged(self, task: Task) -> dict[str, Any] | None:
         """The earlier record of a task that need not be done again."""
         before: dict[str, Any] | None = self.before.get(task.name)
         if not before or before.get("state") != "done":
@@ -199,7 +178,7 @@ class _Runner:
         self.run.findings += [_finding(found) for found in record.get("findings", ())]
         return record
 
-    def do(self, task: SitesTask | RatesTask) -> dict[str, Any]:
+    def do(self, task: Task) -> dict[str, Any]:
         """Do one task; a fault in its data fails it and not the others."""
         settings, inputs = self.settings(task), self.inputs(task)
         record: dict[str, Any] = {"kind": task.kind, "state": "done", "settings": settings}
@@ -207,11 +186,12 @@ class _Runner:
         trail = provenance(inputs, settings)
         already = len(self.run.findings)
         try:
-            if isinstance(task, SitesTask):
-                names = self._sites(task, trail, record)
-            else:
-                names = self._rates(task, trail)
-            record["files"] = {name: sha256_of(self.run.folder / name) for name in names}
+            done = do_task(task, self.bench, trail)
+            if done.rows:
+                record["rows"] = dict(sorted(done.rows.items()))
+            self.run.findings += done.findings
+            self.segments.update(done.segments)
+            record["files"] = {name: sha256_of(self.run.folder / name) for name in done.files}
         except OncewhereError as exc:
             record |= {"state": "failed", "reason": str(exc)}
             place = self.scenario.document.place("task", self.scenario.tasks.index(task))
@@ -219,55 +199,6 @@ class _Runner:
                 self.run.findings.append(Finding("error", "task failed", place, f"{task.name}: {line}"))
         record["findings"] = [found.as_record() for found in self.run.findings[already:]]
         return record
-
-    def _sites(self, task: SitesTask, trail: dict[str, Any], record: dict[str, Any]) -> list[str]:
-        job = SiteJob(
-            self.circuit,
-            parse_ages(task.ages),
-            self.latitudes,
-            self.scenario.root.conventions.radius_km,
-            self.scenario.root.frame.kind,
-            self.threads,
-            None if task.draws is None else Draws(task.draws, task.seed),
-            self._site_clock(task),
-            self.ground,
-        )
-        name = f"{task.name}.csv"
-        table = self.scenario.path(task.file)
-        done = restore_file(table, job, task.table.layout(), self.run.folder / name, None, trail)
-        record["rows"] = dict(sorted(done.counts.items()))
-        self.run.findings += done.findings
-        self.segments.update(done.segments)
-        return [name]
-
-    def _site_clock(self, task: SitesTask) -> SiteClock | None:
-        if self.clock is None:
-            return None
-        own = TimeScale.read(task.time_scale, self.scenario.folder) if task.time_scale else None
-        return SiteClock(self.clock, own)
-
-    def _rates(self, task: RatesTask, trail: dict[str, Any]) -> list[str]:
-        conventions = self.scenario.root.conventions
-        own, lat, lon = read_points(self.scenario.path(task.file), task.table.layout())
-        found = rates(
-            self.history,
-            task.plate,
-            task.relative_to,
-            lat,
-            lon,
-            task.age_ma,
-            task.at_on,
-            self.latitudes,
-            conventions.radius_km,
-            conventions.beyond,
-        )
-        said = {"plate": task.plate, "relative_to": task.relative_to}
-        said |= {"latitudes": conventions.latitudes, "errors": "error of rows only"}
-        results = found.columns() | {name: [text] * len(lat) for name, text in said.items()}
-        name = f"{task.name}.csv"
-        with TableOut(self.run.folder / name, trail) as target:
-            target.add(beside(own, results))
-        return [name]
 
     def write_findings(self) -> None:
         """Write `findings.csv`: those of the audit and of every task."""
@@ -280,7 +211,7 @@ class _Runner:
     def write_ledger(self) -> None:
         """Write `ledger.csv`: the entries that results of all tasks share; kept tasks' entries stay."""
         path = self.run.folder / "ledger.csv"
-        columns = entries(self.circuit, self.segments)
+        columns = entries(self.bench.circuit, self.segments)
         if self.keeps and path.is_file():
             with DelimitedReader(path) as reader:
                 (before,) = reader.chunks(size=2**62)

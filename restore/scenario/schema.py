@@ -9,30 +9,20 @@ from typing import Annotated, Any, Literal
 
 from pydantic import (
     BaseModel,
-    ConfigDict,
     Field,
-    StrictBool,
     StrictStr,
     ValidationError,
-    field_validator,
-    model_validator,
 )
 
-from restore.errors import InputError, ScenarioError, raise_faults
-from restore.files.delimited import Layout
+from restore.errors import ScenarioError, raise_faults
 from restore.files.toml import TomlDocument, read_toml
 from restore.findings import Finding, did_you_mean
-from restore.motion.ages import parse_ages
+from restore.scenario.kinds import TASKS, Part, Task
 
-Age = Annotated[float, Field(ge=0.0, allow_inf_nan=False, strict=True)]
-TAKEN = {"findings", "ledger"}
-
-
-class _Part(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True)
+MORE_FILES = ("share", "paths")
 
 
-class HistoryPart(_Part):
+class HistoryPart(Part):
     """Which history."""
 
     file: StrictStr
@@ -40,7 +30,7 @@ class HistoryPart(_Part):
     rides: StrictStr | None = None
 
 
-class OutlinesPart(_Part):
+class OutlinesPart(Part):
     """The plates' outlines, for sites without a label."""
 
     file: StrictStr
@@ -49,21 +39,21 @@ class OutlinesPart(_Part):
     within_km: Annotated[float, Field(ge=0.0, allow_inf_nan=False, strict=True)] = 0.0
 
 
-class CrustPart(_Part):
+class CrustPart(Part):
     """A grid of crustal ages, Ma, for host ages."""
 
     file: StrictStr
     variable: StrictStr | None = None
 
 
-class FramePart(_Part):
+class FramePart(Part):
     """What positions are given in."""
 
     name: StrictStr
     kind: Literal["plate", "mantle", "spin-axis"]
 
 
-class ConventionsPart(_Part):
+class ConventionsPart(Part):
     """What numbers mean; these are the defaults."""
 
     latitudes: Literal["as-given", "geodetic"] = "as-given"
@@ -71,93 +61,7 @@ class ConventionsPart(_Part):
     beyond: Literal["refuse", "hold", "extend"] = "refuse"
 
 
-class TablePart(_Part):
-    """How a table of a task is written."""
-
-    delimiter: StrictStr = ","
-    decimal: Literal[".", ","] = "."
-    comment: StrictStr = ""
-    header: StrictBool = True
-    encoding: StrictStr = "utf-8-sig"
-    columns: dict[StrictStr, Any] = Field(default_factory=dict)
-
-    @field_validator("columns")
-    @classmethod
-    def _columns(cls, value: dict[str, Any]) -> dict[str, Any]:
-        for ours, theirs in value.items():
-            if not isinstance(theirs, str) and type(theirs) is not int:
-                raise ValueError(f"{ours} = {theirs!r}: must be the name or the number of a column")
-        return value
-
-    @model_validator(mode="after")
-    def _fits(self) -> TablePart:
-        try:
-            self.layout()
-        except InputError as exc:
-            raise ValueError(str(exc)) from None
-        return self
-
-    def layout(self) -> Layout:
-        """The layout that this part describes."""
-        return Layout(
-            delimiter=self.delimiter,
-            comment=self.comment,
-            header=self.header,
-            decimal=self.decimal,
-            encoding=self.encoding,
-            columns=dict(self.columns),
-        )
-
-
-class _Task(_Part):
-    name: Annotated[StrictStr, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]*$")]
-    file: StrictStr
-    table: TablePart = TablePart()
-
-    @field_validator("name")
-    @classmethod
-    def _name(cls, value: str) -> str:
-        if value.lower() in TAKEN:
-            raise ValueError(f"{value}.csv is a file of the run itself; give the task another name")
-        return value
-
-
-class SitesTask(_Task):
-    """Sites restored to their own ages or to given ones."""
-
-    kind: Literal["sites"]
-    ages: Any = "own"
-    time_scale: StrictStr | None = None
-    draws: Annotated[int, Field(ge=1, strict=True)] | None = None
-    seed: Annotated[int, Field(ge=0, strict=True)] = 1
-
-    @field_validator("ages")
-    @classmethod
-    def _ages(cls, value: Any) -> Any:
-        numbers = value if isinstance(value, list) else [value]
-        if not isinstance(value, str) and not all(type(number) in {int, float} for number in numbers):
-            raise ValueError("must be 'own', '0:120:10', an age or a list of ages, Ma")
-        try:
-            parse_ages(value)
-        except InputError as exc:
-            raise ValueError(str(exc).removeprefix(f"ages {value!r}: ")) from None
-        return value
-
-
-class RatesTask(_Task):
-    """Rates of a plate relative to another at points."""
-
-    kind: Literal["rates"]
-    plate: StrictStr
-    relative_to: StrictStr
-    age_ma: Age = 0.0
-    at_on: Literal["plate", "relative-to"] = "plate"
-
-
-TASKS: dict[str, type[_Task]] = {"sites": SitesTask, "rates": RatesTask}
-
-
-class _Root(_Part):
+class _Root(Part):
     version: Annotated[int, Field(ge=1, le=1, strict=True)]
     title: StrictStr = ""
     history: HistoryPart
@@ -174,7 +78,7 @@ class Scenario:
 
     document: TomlDocument
     root: _Root
-    tasks: tuple[SitesTask | RatesTask, ...]
+    tasks: tuple[Task, ...]
 
     @property
     def folder(self) -> Path:
@@ -206,7 +110,7 @@ def read_scenario(path: str | os.PathLike[str]) -> Scenario:
     findings.sort(key=lambda finding: (finding.place.line or 0, finding.place.column or 0))
     raise_faults(ScenarioError, findings)
     assert root is not None
-    return Scenario(document, root, tuple(task for task in tasks if task is not None))  # type: ignore[misc]
+    return Scenario(document, root, tuple(task for task in tasks if task is not None))
 
 
 def _task_values(document: TomlDocument) -> list[Any]:
@@ -218,7 +122,7 @@ def _fault(document: TomlDocument, path: tuple[str | int, ...], what: str, remed
     return Finding("error", "scenario", document.place(*path), what, remedy=remedy)
 
 
-def _task(document: TomlDocument, index: int, values: Any, findings: list[Finding]) -> _Task | None:
+def _task(document: TomlDocument, index: int, values: Any, findings: list[Finding]) -> Task | None:
     path: tuple[str | int, ...] = ("task", index)
     if not isinstance(values, dict):
         findings.append(_fault(document, path, "a task is not a table", "write [[task]]"))
@@ -229,7 +133,7 @@ def _task(document: TomlDocument, index: int, values: Any, findings: list[Findin
         remedy = did_you_mean(str(kind), TASKS) or "must be one of " + ", ".join(TASKS)
         findings.append(_fault(document, (*path, "kind"), what, remedy))
         return None
-    task: _Task | None = _validated(TASKS[kind], values, path, document, findings)
+    task: Task | None = _validated(TASKS[kind], values, path, document, findings)
     return task
 
 
@@ -327,7 +231,7 @@ def _fields(model: type[BaseModel], where: tuple[str | int, ...]) -> list[str]:
     return list(model.model_fields)
 
 
-def _check_names(document: TomlDocument, tasks: list[_Task | None], findings: list[Finding]) -> None:
+def _check_names(document: TomlDocument, tasks: list[Task | None], findings: list[Finding]) -> None:
     seen: dict[str, int] = {}
     for index, task in enumerate(tasks):
         if task is None:
@@ -350,6 +254,9 @@ def _check_files(document: TomlDocument, findings: list[Finding]) -> None:
     for index, task in enumerate(_task_values(document)):
         if isinstance(task, dict):
             named.append((("task", index, "file"), task.get("file")))
+            named += [
+                (("task", index, key), task[key]) for key in MORE_FILES if isinstance(task.get(key), str)
+            ]
     for path, name in named:
         if not isinstance(name, str) or (folder / name).is_file():
             continue
