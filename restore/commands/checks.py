@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from restore.commands.options import counted, debug_option, print_json
+from restore.commands.options import counted, debug_option, print_json, riding
 from restore.errors import OncewhereError
 
 if TYPE_CHECKING:
@@ -26,15 +26,17 @@ OUTLINE_ENDINGS = frozenset({".geojson", ".gpkg", ".shp", ".geoparquet"})
     "--rows/--no-rows", "rows", default=None, help="Print what was read, to hold against the paper"
     " (a manifest's by default)."
 )  # fmt: skip
+@click.option("--rides", metavar="FILE", help="Pieces that rode on other plates; with --out they go into the"
+              " history.")  # fmt: skip
 @click.option("--out", metavar="FILE.nc", help="Write the history as one netCDF file, if it has no error.")
 @debug_option
-def check(file: str, as_json: bool, rows: bool | None, out: str | None) -> int:
+def check(file: str, as_json: bool, rows: bool | None, rides: str | None, out: str | None) -> int:
     """Say what is wrong or doubtful in a history, a scenario or outlines; exit 1 if anything is an error.
 
     \b
     oncewhere check scenario_files/history.toml --out history.nc
     """
-    findings, history = _audited(file)
+    findings, history = _audited(file, rides)
     failed = any(finding.severity == "error" for finding in findings)
     if as_json:
         print_json([finding.as_record() for finding in findings])
@@ -58,7 +60,7 @@ def _summary(findings: list[Finding]) -> str:
     return ", ".join(counted(number, severity) for severity, number in counts.items())
 
 
-def _audited(file: str) -> tuple[list[Finding], History | None]:
+def _audited(file: str, rides: str | None = None) -> tuple[list[Finding], History | None]:
     """The findings of a file, and the history if it can be read at all."""
     from restore.history.audit import audit
     from restore.history.store import History
@@ -83,7 +85,7 @@ def _audited(file: str) -> tuple[list[Finding], History | None]:
             return findings, history
         if Path(file).suffix.lower() in OUTLINE_ENDINGS:
             return audit_outlines(Outlines.read(file)), None
-        history = History.read(file)
+        history = riding(History.read(file), rides)
         return audit(history), history
     except OncewhereError as exc:
         if exc.findings:

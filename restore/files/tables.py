@@ -237,7 +237,11 @@ class TableOut:
         places = geopandas.points_from_xy(frame[lon_name], frame[lat_name], crs="EPSG:4326")
         table = geopandas.GeoDataFrame(frame, geometry=places)
         metadata = {"provenance": json.dumps(self.provenance)}
-        table.to_file(part, driver="GPKG", layer=Path(str(self.path)).stem, dataset_metadata=metadata)
+        # the driver wants a name that ends in .gpkg, which the part's does not
+        content = io.BytesIO()
+        layer = Path(str(self.path)).stem
+        table.to_file(content, driver="GPKG", layer=layer, dataset_metadata=metadata)
+        part.write_bytes(content.getvalue())
 
 
 def _as_numbers(name: str, values: list[Any]) -> list[Any] | np.ndarray:

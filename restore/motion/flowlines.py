@@ -389,3 +389,7 @@ def _keep_digits(result: Flowlines) -> None:
     rows, sides, places = np.nonzero(own & given[:, :, np.newaxis] & (result.status == REACHED))
     result.lat_deg[rows, sides, places] = starts.lat_deg[rows]
     result.lon_deg[rows, sides, places] = wrap_longitude(starts.lon_deg[rows])
+    if result.spreading.errors:
+        # whatever the rows' errors are, they cancel there, which rounding does not know
+        result.axes[:3, rows, sides, places] = 0.0
+        result.axes[3, rows, sides, places] = np.nan
