@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from restore.history.store import History
 
 
-OUTLINE_ENDINGS = frozenset({".geojson", ".gpkg", ".shp", ".geoparquet"})
+OUTLINE_ENDINGS = frozenset({".geojson", ".json", ".gpkg", ".shp", ".parquet", ".geoparquet", ".fgb"})
 
 
 @click.command()
@@ -69,20 +69,12 @@ def _audited(file: str, rides: str | None = None) -> tuple[list[Finding], Histor
 
     try:
         if Path(file).suffix.lower() == ".toml" and _is_scenario(file):
-            from restore.scenario.faults import clock_faults, label_faults
-            from restore.scenario.inputs import ground_of, read_scenario_history
+            from restore.scenario.inputs import audited, ground_of, opened
             from restore.scenario.schema import read_scenario
 
             scenario = read_scenario(file)
-            history = read_scenario_history(scenario)
-            faults = [*label_faults(scenario, history), *clock_faults(scenario, history)]
-            if faults:
-                return faults, history
-            ground = ground_of(scenario)
-            findings = audit(history, scenario.root.frame.name)
-            if ground is not None and ground.outlines is not None:
-                findings += audit_outlines(ground.outlines, history)
-            return findings, history
+            history, _, remarks = opened(scenario)
+            return [*remarks, *audited(scenario, history, ground_of(scenario))], history
         if Path(file).suffix.lower() in OUTLINE_ENDINGS:
             return audit_outlines(Outlines.read(file)), None
         history = riding(History.read(file), rides)

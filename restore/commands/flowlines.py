@@ -12,7 +12,6 @@ from restore.commands.spreading import (
     ages_option,
     make_shares,
     need_ages,
-    outgoing,
     pair_options,
     said,
     say_statuses,
@@ -92,8 +91,7 @@ def flowlines(
         every_myr=every_myr, restored_ma=restored_age,
     )  # fmt: skip
     starts = RidgePoints.read(points, between, make_layout(**layout))
-    if outlines is not None:
-        _say_off_boundary(starts, spreading, outlines, points)
+    _say_off_boundary(starts, spreading, outlines, points)
     settings = {
         "between": list(between), "ages": list(asked), "share": shares.words(), "frame": frame,
         "restored_age": restored_age, "every_myr": every_myr, "tolerance_m": tolerance_m,
@@ -101,14 +99,15 @@ def flowlines(
     }  # fmt: skip
     more = [file for file in (jumps, observed, outlines, share) if isinstance(file, str)]
     inputs = [points, *history_inputs(history_file, history), *more]
-    where = POSITIONS if not (rates or at_km or by_stage) else None
-    with TableOut(out, provenance(inputs, settings), where) as target:
+    with TableOut(
+        out, provenance(inputs, settings), None if rates or at_km or by_stage else POSITIONS
+    ) as target:
         if rates or at_km:
             _write_along(target, spreading, starts, at_km, latitudes)
         elif observed is not None:
             _write_observed(target, spreading, starts, observed, by_stage, latitudes)
         else:
-            return _write_positions(target, spreading, starts, jumps, out)
+            return _write_positions(target, spreading, starts, jumps)
     return 0
 
 
@@ -133,9 +132,7 @@ def _check_choices(
                                " --frame and --jumps")  # fmt: skip
 
 
-def _write_positions(
-    target: TableOut, spreading: Spreading, starts: RidgePoints, jumps: str | None, out: str | None
-) -> int:
+def _write_positions(target: TableOut, spreading: Spreading, starts: RidgePoints, jumps: str | None) -> int:
     from restore.motion.flowlines import FlowlineMaker
     from restore.motion.ridge_points import read_jumps
 
@@ -151,7 +148,7 @@ def _write_positions(
     for at in range(0, max(len(starts), 1), size):
         made = maker.make(starts.some(slice(at, at + size)), its_jumps)
         states.update(made.states())
-        target.add(outgoing(said(made.columns(), **words), out))
+        target.add(said(made.columns(), **words))
     return say_statuses(states.elements())
 
 
@@ -193,7 +190,9 @@ def _write_observed(
     target.add(said(columns, latitudes=latitudes, errors="error of rows only"))
 
 
-def _say_off_boundary(starts: RidgePoints, spreading: Spreading, outlines: str, file: str) -> None:
+def _say_off_boundary(starts: RidgePoints, spreading: Spreading, outlines: str | None, file: str) -> None:
+    if outlines is None:
+        return
     from restore.motion.boundary import off_boundary
     from restore.outlines import Outlines
 

@@ -12,7 +12,6 @@ from restore.commands.spreading import (
     ages_option,
     make_shares,
     need_ages,
-    outgoing,
     pair_options,
     said,
     say_statuses,
@@ -22,6 +21,7 @@ from restore.commands.spreading import (
 if TYPE_CHECKING:
     from restore.motion.flowlines import Spreading
     from restore.motion.isochrons import RidgeLine
+    from restore.motion.site_clock import SiteClock
 
 
 @click.command()
@@ -71,25 +71,14 @@ def isochrons(
     oncewhere isochrons scenario_files/ridge.geojson --between ovrath,quemmel --ages 10,20,40 \\
         --history scenario_files/history.toml --out isochrons.geojson
     """
-    if by_stage and observed is None:
-        raise click.UsageError("--by-stage needs --observed FILE")
-    if (ages is None) == (chrons is None) and observed is None:
-        raise click.UsageError("give either --ages or --chrons")
-    if ridge_age > 0.0 and not on_plate:
-        raise click.UsageError("--ridge-age needs --on-plate: the plate whose coordinates the line is in")
+    _check_choices(ages, chrons, ridge_age, on_plate, observed, by_stage)
     from restore.geometry.latitudes import Latitudes
     from restore.motion.flowlines import Spreading
     from restore.motion.isochrons import densified_line, read_ridge
 
     history, clock = one_clock(read_history(history_file), time_scale, None)
-    named: dict[float, str] = {}
-    if chrons is not None:
-        from restore.motion.isochrons import chron_ages
-
-        if clock is None:
-            raise click.UsageError("--chrons needs --time-scale: the history names no clock")
-        named = chron_ages(chrons.split(","), clock.to)
-        ages = tuple(sorted(named))
+    named = _named_ages(chrons, clock)
+    ages = tuple(sorted(named)) if named else ages
     asked = (0.0,) if observed is not None and ages is None else need_ages(ages)
     shares = make_shares(share)
     spreading = Spreading.between(
@@ -111,6 +100,33 @@ def isochrons(
         _write_observed(spreading, lines, observed, by_stage, out, inputs, settings)
         return 0
     return _write_lines(spreading, lines, named, (ridge_age, on_plate), out, inputs, settings)
+
+
+def _check_choices(
+    ages: tuple[float, ...] | None,
+    chrons: str | None,
+    ridge_age: float,
+    on_plate: str,
+    observed: str | None,
+    by_stage: bool,
+) -> None:
+    if by_stage and observed is None:
+        raise click.UsageError("--by-stage needs --observed FILE")
+    if (ages is None) == (chrons is None) and observed is None:
+        raise click.UsageError("give either --ages or --chrons")
+    if ridge_age > 0.0 and not on_plate:
+        raise click.UsageError("--ridge-age needs --on-plate: the plate whose coordinates the line is in")
+
+
+def _named_ages(chrons: str | None, clock: SiteClock | None) -> dict[float, str]:
+    """The ages of the chrons that were asked, on the run's clock."""
+    if chrons is None:
+        return {}
+    from restore.motion.isochrons import chron_ages
+
+    if clock is None:
+        raise click.UsageError("--chrons needs --time-scale: the history names no clock")
+    return chron_ages(chrons.split(","), clock.to)
 
 
 def _say_repeated(lines: list[RidgeLine], file: str) -> None:
@@ -152,7 +168,7 @@ def _write_lines(
         write_geojson(out, found.features(), record)
         return code
     with TableOut(out, record, ("lat_deg", "lon_deg")) as target:
-        target.add(outgoing(said(found.columns(), latitudes=spreading.latitudes.kind), out))
+        target.add(said(found.columns(), latitudes=spreading.latitudes.kind))
     return code
 
 

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import Any
-
 import click
 
 from restore.commands.options import (
@@ -16,23 +14,7 @@ from restore.commands.options import (
     radius_option,
     read_history,
 )
-
-
-class Pair(click.ParamType[Any]):
-    """Two plates, A,B."""
-
-    name = "pair"
-
-    def get_metavar(self, param: click.Parameter, ctx: click.Context) -> str:
-        return "A,B"
-
-    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
-        if isinstance(value, tuple):
-            return value
-        labels = tuple(label.strip() for label in value.split(","))
-        if len(labels) != 2 or not all(labels) or labels[0] == labels[1]:
-            self.fail(f"{value!r}: write two different plates, A,B", param, ctx)
-        return labels
+from restore.commands.spreading import Pair
 
 
 @click.command()

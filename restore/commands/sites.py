@@ -116,7 +116,7 @@ def sites(
     }
     if clock is not None:
         settings |= {"time_scale": clock.to.name, "table_time_scale": table_time_scale}
-    inputs = [table, *history_inputs(history_file, history)]
+    inputs = [table, *history_inputs(history_file, history), *([rides] if rides else [])]
     if ground is not None:
         named = {"outlines": outlines, "edges": edges, "within_km": within_km, "crust_age": crust_age}
         settings |= named

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 from collections import Counter
 from collections.abc import Callable, Iterable, Mapping
 from typing import TYPE_CHECKING, Any, TypeVar
@@ -113,20 +112,6 @@ def make_shares(share: float | str) -> Shares:
     from restore.motion.shares import Shares
 
     return Shares.read(share) if isinstance(share, str) else Shares.constant(share)
-
-
-def outgoing(columns: Mapping[str, Any], out: str | None) -> dict[str, Any]:
-    """Columns as a file wants them: in CSV yes and no are `true` and `false`."""
-    import numpy as np
-
-    if out is not None and os.path.splitext(out)[1].lower() != ".csv":
-        return dict(columns)
-    return {
-        name: ["true" if value else "false" for value in values.tolist()]
-        if isinstance(values, np.ndarray) and values.dtype == np.bool_
-        else values
-        for name, values in columns.items()
-    }
 
 
 def said(columns: Mapping[str, Any], **words: str) -> dict[str, Any]:

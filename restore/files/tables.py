@@ -47,9 +47,12 @@ def texts(name: str, values: Sequence[Any] | np.ndarray) -> list[str]:
         else:
             said = ["" if v != v else repr(round(v, decimals) + 0.0) for v in values.tolist()]
         return [text[:-2] if text.endswith(".0") else text for text in said]
+    if isinstance(values, np.ndarray) and values.dtype == np.bool_:
+        return ["true" if value else "false" for value in values.tolist()]
     if len(values) and isinstance(values[0], str) and all(isinstance(v, str) for v in values):
         return list(values)
-    return ["" if v is None or v != v else str(v) for v in values]
+    words = {True: "true", False: "false"}
+    return [words[v] if isinstance(v, bool) else "" if v is None or v != v else str(v) for v in values]
 
 
 def record_value(name: str, value: Any) -> Any:

@@ -75,14 +75,17 @@ def _wrong(ride: Ride) -> tuple[str, None, str] | None:
     return None
 
 
-def with_rides(history: History, rides: list[Ride], file: str = "") -> History:
-    """A history in which each piece rides as the table says.
+def with_rides(history: History, rides: list[Ride], file: str = "", table: Table | None = None) -> History:
+    """A history in which each piece rides as the table says; `table` describes it.
+
+    The errors at a change are those of the rows it was made from, taken as if they were others: ellipses
+    at older ages are rather too large than too small.
 
     Raises HistoryError if a piece's rides do not follow one another from 0 Ma on without gap or
     overlap, if the history already moves the piece, or if it does not tie two of its plates at the
     age of a change.
     """
-    table = len(history.tables)
+    number = len(history.tables)
     rows: list[Row] = []
     for plate in dict.fromkeys(ride.plate for ride in rides):
         own = sorted((r for r in rides if r.plate == plate), key=lambda r: r.youngest_ma)
@@ -96,8 +99,10 @@ def with_rides(history: History, rides: list[Ride], file: str = "") -> History:
                     f" {ride.youngest_ma:g} Ma where {expected:g} Ma is expected; rides follow one another"
                 )
             expected = ride.oldest_ma
-        rows += _rows_of(history, own, table, file)
-    added = Table(file=file, title="pieces that ride on plates of the history")
+        rows += _rows_of(history, own, number, file)
+    clocks = {one.time_scale for one in history.tables}
+    clock = clocks.pop() if len(clocks) == 1 else ""
+    added = table or Table(file=file, title="pieces that ride on plates", time_scale=clock)
     return History.from_rows(
         [*(history.rows.row(n) for n in range(len(history))), *rows],
         (*history.tables, added),

@@ -42,7 +42,10 @@ class Curve:
 
     @classmethod
     def of(cls, edges: Floats, at: Callable[[Floats], Floats], radius_km: float) -> Curve:
-        """A curve `at` (ages to unit vectors) that is smooth between some ages, the `edges`."""
+        """A curve `at` (ages to unit vectors) that is smooth between some ages, the `edges`.
+
+        Where `at` gives NaN there is no curve.
+        """
         corners = at(edges)
         apart = angular_distance(corners[:-1], corners[1:]) * radius_km
         # a curve that comes back has a short chord: eight pieces show how far it went
@@ -50,7 +53,8 @@ class Curve:
         fine = np.append(fine, edges[-1])
         steps = angular_distance(at(fine)[:-1], at(fine)[1:]) * radius_km
         whole = np.maximum(steps.reshape(len(apart), 8).max(axis=1) * 8.0, apart)
-        counts = np.clip(np.ceil(whole * 1.1 / LONGEST_KM), 8, MOST_POINTS).astype(int)
+        wanted = np.nan_to_num(np.ceil(whole * 1.1 / LONGEST_KM))
+        counts = np.clip(wanted, 8, MOST_POINTS).astype(int)
         parts = [
             np.linspace(a, b, n + 1)[:-1] for a, b, n in zip(edges[:-1], edges[1:], counts, strict=True)
         ]
@@ -66,7 +70,7 @@ class Curve:
 
         A curve that stays in one place has no left and right: the distance is then positive.
         """
-        if len(self.ages) == 0:
+        if len(self.ages) < 2:
             blank = np.full(len(points), np.nan)
             return Foot(blank, blank, blank, np.full((len(points), 3), np.nan))
         if self.along_km[-1] == 0.0:

@@ -231,8 +231,9 @@ class TrailMaker:
     def curve(self, hotspots: Hotspots, number: int, oldest_ma: float) -> Curve:
         """One trail as a line fine enough for distances, from 0 Ma to an age inside the history.
 
-        Raises DomainError (its leaves) where the history or the hotspot's path does not reach.
+        It ends where the hotspot's path does. Raises DomainError (its leaves) beyond the history.
         """
+        self.circuit.at(self.plate, oldest_ma)
         edges = self.circuit.row_ages(self.plate, 0.0, oldest_ma)
         turns = hotspots.own_ages(number)
         inside = turns[(turns > 0.0) & (turns < oldest_ma)]

@@ -17,7 +17,7 @@ from restore.files.vectors import Feature, read_features
 from restore.findings import did_you_mean
 from restore.geometry.latitudes import Latitudes
 from restore.geometry.polygons import Polygon, Ring, SortedPoints, densified
-from restore.geometry.sphere import EARTH_RADIUS_KM, Floats, cross, length
+from restore.geometry.sphere import EARTH_RADIUS_KM, Floats, angular_distance, cross, length
 
 EDGES = ("great-circle", "straight")
 STRAIGHT_WITHIN_KM = 0.01
@@ -138,9 +138,11 @@ class Outlines:
         for number, one in enumerate(self.outlines):
             for polygon in one.polygons:
                 for ring in polygon.rings:
-                    away = nearest_on_edges(places, ring.vectors(), closed=True) * EARTH_RADIUS_KM
-                    nearer = away < least
-                    least[nearer], owner[nearer] = away[nearer], number
+                    v = ring.vectors()
+                    some = _within_reach(places, v, within_km / EARTH_RADIUS_KM)
+                    away = nearest_on_edges(places[some], v, closed=True) * EARTH_RADIUS_KM
+                    nearer = away < least[some]
+                    least[some[nearer]], owner[some[nearer]] = away[nearer], number
         near = least <= within_km
         outline[lost[near]] = owner[near]
         distance[lost[near]] = least[near]
@@ -150,6 +152,15 @@ class Outlines:
         young = np.array([*(o.youngest_ma for o in self.outlines), 0.0])
         old = np.array([*(o.oldest_ma for o in self.outlines), math.inf])
         return young[outline], old[outline]
+
+
+def _within_reach(places: Floats, ring: Floats, reach: float) -> NDArray[np.int64]:
+    """Numbers of the places (n, 3) that may lie within `reach` (radians) of a ring (m, 3): near its cap."""
+    centre = np.asarray(ring.sum(axis=0))
+    radius = float(angular_distance(ring, centre).max())
+    if radius > 1.5:  # a cap smaller than a hemisphere holds the arcs between its places
+        return np.arange(len(places))
+    return np.flatnonzero(angular_distance(places, centre) <= radius + reach + 1e-9)
 
 
 def _outline(feature: Feature, plate_property: str, edges: str, latitudes: Latitudes) -> Outline:

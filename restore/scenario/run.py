@@ -10,17 +10,14 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from restore.errors import InputError, OncewhereError, ScenarioError, raise_faults
+from restore.errors import InputError, OncewhereError
 from restore.files.atomic import whole_file
 from restore.files.delimited import DelimitedReader
 from restore.files.tables import csv_text, texts
 from restore.findings import Finding, Place
-from restore.history.audit import audit
 from restore.history.circuit import Circuit
 from restore.history.ledger import Segment, entries
-from restore.outlines.audit import audit_outlines
-from restore.scenario.faults import clock_faults, label_faults
-from restore.scenario.inputs import ground_of, on_the_clock, read_scenario_history
+from restore.scenario.inputs import audited, ground_of, opened
 from restore.scenario.kinds import Task
 from restore.scenario.provenance import (
     CAUTION,
@@ -66,17 +63,12 @@ def run_scenario(
     the scenario at once, HistoryError for its history, InputError if the folder is there already.
     """
     scenario = read_scenario(path)
-    history = read_scenario_history(scenario)
-    raise_faults(ScenarioError, [*label_faults(scenario, history), *clock_faults(scenario, history)])
+    history, clock, findings = opened(scenario)
     folder = Path(out) if out is not None else Path(path).with_name(f"{Path(path).stem}-results")
     before = _make_folder(folder, go_on)
     run = Run(folder)
-    run.findings += audit(history, scenario.root.frame.name)
     ground = ground_of(scenario)
-    if ground is not None and ground.outlines is not None:
-        run.findings += audit_outlines(ground.outlines, history)
-    history, clock, remarks = on_the_clock(scenario, history)
-    run.findings += remarks
+    run.findings += [*findings, *audited(scenario, history, ground)]
     circuit = Circuit(history, scenario.root.frame.name, scenario.root.conventions.beyond)
     bench = Bench(scenario, history, circuit, clock, ground, folder, threads)
     runner = _Runner(bench, run, before)

@@ -9,8 +9,6 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from restore.files.lines import read_lines
 from restore.files.points import beside, read_points
 from restore.files.tables import TableOut
@@ -107,8 +105,6 @@ def _table(
     name = f"{task.name}.csv"
     count = len(next(iter(columns.values())))
     columns = {**columns, **{key: [text] * count for key, text in words.items() if key not in columns}}
-    flags = {key: values for key, values in columns.items() if getattr(values, "dtype", None) == np.bool_}
-    columns |= {key: ["true" if v else "false" for v in values.tolist()] for key, values in flags.items()}
     with TableOut(bench.folder / name, trail) as target:
         target.add(columns)
     return Outcome([name], Counter(columns.get("status", ())))

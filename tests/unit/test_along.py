@@ -218,3 +218,12 @@ def test_observed_points_at_fault(tmp_path):
     table = observed_table(tmp_path, spreading, "plate,lat_deg,lon_deg,start\nA,0,0,Q\n")
     with pytest.raises(TableError, match="no start point 'Q'"):
         against_flowlines(spreading, RidgePoints.of([0.0], [0.0], PAIR), table)
+
+
+def test_observed_points_beyond_the_history(tmp_path):
+    """The flowline ends with the history; the point is off its end."""
+    spreading = Spreading.between(History.from_rows(two_rates()), PAIR, (45.0,), 0.5)
+    table = observed_table(tmp_path, spreading, "plate,lat_deg,lon_deg\nB,0,27\n")
+    misfits, _ = against_flowlines(spreading, RidgePoints.of([0.0], [0.0], PAIR), table)
+    assert misfits.age_ma == pytest.approx([30.0], abs=1e-3)
+    assert abs(misfits.distance_km[0]) == pytest.approx(2.0 * KM_PER_DEGREE, abs=0.6)

@@ -63,6 +63,39 @@ def test_two_signs_too_many():
     assert [finding.place.line for finding in found(of(rows), "likely sign")] == [4, 7]
 
 
+@pytest.mark.parametrize(
+    ("turned", "first", "last"),
+    [((3, 4), 3, 4), ((1, 2), 1, 2), ((5, 6), 5, 6), ((3, 4, 5), 3, 5), ((4, 5, 6), 4, 6)],
+)
+def test_a_run_of_rows_turns_the_other_way(turned, first, last):
+    """Two papers with two conventions in one table: one error at the first row of the part that is
+    smaller (of two halves the older), which says how many rows turn against the others.
+    """
+    rows = steady(0.5)
+    for at in turned:
+        rows = changed(rows, at, angle_deg=-rows[at].angle_deg)
+    findings = [f for f in audit(of(rows), "deep") if f.severity != "note"]
+    assert [(f.severity, f.kind, f.place.line) for f in findings] == [("error", "likely sign", first + 2)]
+    assert f"at {first}0 to {last}0 Ma ({len(turned)} rows)" in findings[0].what
+    assert "these rows turn against the others" in findings[0].remedy
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_plates_that_change_their_motion_are_not_suspected(seed):
+    """Paths that bend sharply at irregular ages, up to 100 mm/yr, give no error."""
+    rng = np.random.default_rng(seed)
+    ages = np.concatenate([[0.0], np.sort(rng.uniform(2.0, 160.0, 15))])
+    turn, rows, axis, rate = Rotation.identity(), [], rng.normal(size=3), 0.5
+    for n, step in enumerate(np.diff(ages, prepend=0.0)):
+        if rng.random() < 0.3:
+            axis, rate = rng.normal(size=3), rng.uniform(0.1, 0.9)
+        turn = turn * Rotation.from_rotvec(axis / np.linalg.norm(axis) * math.radians(rate * step))
+        x, y, z = turn.as_rotvec()
+        lat, lon = math.degrees(math.atan2(z, math.hypot(x, y))), math.degrees(math.atan2(y, x))
+        rows.append(Row("afra", "deep", ages[n], lat, lon, math.degrees(turn.magnitude()), line=n + 2))
+    assert [f for f in audit(of(rows), "deep") if f.severity == "error"] == []
+
+
 def test_a_pole_on_the_other_side_without_the_sign():
     """The antipode typed with the angle's sign kept is the same slip."""
     rows = changed(steady(0.5), 3, pole_lat_deg=-60.0, pole_lon_deg=-150.0)

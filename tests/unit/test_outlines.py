@@ -355,3 +355,17 @@ def test_the_latitude_kind_binds_outlines(tmp_path):
     assert geodetic.latitudes.kind == "geodetic"
     with pytest.raises(ValueError, match="latitudes = 'geographic': must be one of as-given, geodetic"):
         outlines_of(tmp_path, ring, latitudes="geographic")
+
+
+def test_nearness_does_not_depend_on_how_far_is_looked():
+    """What is found within 400 km is found within 20 000 km too, by the same distance, and no more than that."""
+    whole, _ = tiling(24, 400, 5)
+    some = Outlines(whole.outlines[::3])
+    lat, lon = scattered(2000, 12)
+    near, far = some.plate_at(lat, lon, 400.0), some.plate_at(lat, lon, 20_037.0)
+    assert (far.outline >= 0).all()
+    within = far.distance_km <= 400.0
+    assert np.array_equal(near.outline[within], far.outline[within])
+    assert near.distance_km[within].tolist() == far.distance_km[within].tolist()
+    assert (near.outline[~within] == -1).all()
+    assert 300 < within.sum() < 1900

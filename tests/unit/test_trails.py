@@ -7,7 +7,7 @@ import pytest
 from published.support import RADIUS_KM
 from strategies import R_M
 
-from restore.errors import InputError, TableError, UnknownPlateError
+from restore.errors import InputError, OutsideHistoryError, TableError, UnknownPlateError
 from restore.geometry.sphere import angular_distance, unit_vectors
 from restore.history.rows import Row
 from restore.history.store import History
@@ -153,3 +153,14 @@ def test_the_public_face(tmp_path):
     history = maker().history
     found = [trails(given, history, "P", "F", "0:40:20") for given in (path, still(10.0, 5.0))]
     assert found[0].lon_deg.tolist() == found[1].lon_deg.tolist()
+
+
+def test_a_path_that_ends_ends_the_trail(tmp_path):
+    """Beyond the hotspot's path there is no trail to be near; beyond the history none can be asked."""
+    path = tmp_path / "samples.csv"
+    path.write_text("lat_deg,lon_deg\n0,-29\n0,-60\n", encoding="utf-8")
+    moving = still(paths={"h": (np.array([0.0, 20.0]), np.array([0.0, 0.0]), np.array([0.0, -10.0]))})
+    columns = compare_samples(maker(), moving, read_samples(path, moving), 40.0)
+    assert columns["predicted_age_ma"] == pytest.approx([29.0 / 1.5, 20.0], abs=2e-3)
+    with pytest.raises(OutsideHistoryError):
+        compare_samples(maker(), moving, read_samples(path, moving), 50.0)

@@ -18,6 +18,7 @@ from restore.geometry import so3
 from restore.geometry.sphere import EARTH_RADIUS_KM, Floats
 from restore.geometry.uncertain import RowErrors, Significance, significance, welch_satterthwaite
 from restore.history.audit.places import pair_name, place_of_row
+from restore.history.audit.signs import roughness, turned_runs
 from restore.history.links import Pair
 from restore.history.store import History
 
@@ -99,13 +100,12 @@ class Track:
         track, found = self, list[tuple[Slip, int]]()
         while len(self.ages) >= FEWEST_TO_JUDGE and len(found) < len(self.ages):
             suspects = np.flatnonzero(track.misfits_km() >= MISFIT_KM) + 1
-            slips = [slip for at in suspects if (slip := _slip(track, int(at))) is not None]
+            slips = [*_in_radians(track, suspects.tolist())]
+            slips = slips or ([*_turned_round(track)] if len(suspects) else [])
             if not slips:
                 break
             worst = max(slips, key=lambda slip: slip.km / max(slip.left_km, 1.0))
-            turns = np.array(track.turns)
-            turns[worst.at] = worst.turn
-            track = replace(track, turns=turns)
+            track = worst.undone(track)
             found.append((worst, int(track.rows[worst.at])))
         return track, sorted(found, key=lambda slip: slip[0].at)
 
@@ -122,13 +122,22 @@ def tracks_of(history: History, pairs: Sequence[Pair]) -> list[Track]:
 
 @dataclass(frozen=True)
 class Slip:
-    """A suspected slip of the pen: the place in the track, what undoes it, and how far it is off."""
+    """A suspected slip of the pen: rows `at` to `last` of a track, their turns with the slip undone
+    (n, 4), and how far the worst is off its neighbours' path, as it stands and undone.
+    """
 
     at: int
+    last: int
     kind: str
-    turn: Floats
+    turns: Floats
     km: float
     left_km: float
+
+    def undone(self, track: Track) -> Track:
+        """The track without the slip."""
+        turns = np.array(track.turns)
+        turns[self.at : self.last + 1] = self.turns
+        return replace(track, turns=turns)
 
 
 def slips(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
@@ -143,27 +152,44 @@ def slips(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
     for track in tracks:
         for slip, row in track.slips:
             said, remedy = words[slip.kind]
+            age = f"{track.ages[slip.at]:g} Ma"
+            if slip.last > slip.at:
+                rows = slip.last - slip.at + 1
+                age = f"{track.ages[slip.at]:g} to {track.ages[slip.last]:g} Ma ({rows} rows)"
+                remedy = "compare the signs with the paper: these rows turn against the others"
             what = (
-                f"{track.name} at {history.rows.age_ma[row]:g} Ma is off its neighbours' path: {said};"
+                f"{track.name} at {age} is off its neighbours' path: {said};"
                 f" undone, it is {slip.left_km:.0f} km off"
             )
             yield Finding("error", f"likely {slip.kind}", place_of_row(history, row), what, slip.km, remedy)
 
 
-def _slip(track: Track, at: int) -> Slip | None:
-    if track.rows[at] < 0:
-        return None
-    km = track.misfit_km(at, track.turns[at])
-    vector = so3.logarithm(track.turns[at])
-    small = np.linalg.norm(vector) < math.radians(2.0 * math.pi)
-    degrees = so3.exponential(vector * (180.0 / math.pi)) if small else None
-    for kind, turn in (("sign", so3.conjugate(track.turns[at])), ("radians", degrees)):
-        if turn is None:
-            continue
-        left = track.misfit_km(at, turn)
-        if left * BETTER_BY < km:
-            return Slip(at, kind, turn, km, left)
-    return None
+def _in_radians(track: Track, suspects: Sequence[int]) -> Iterator[Slip]:
+    for at in suspects:
+        vector = so3.logarithm(track.turns[at])
+        if track.rows[at] >= 0 and np.linalg.norm(vector) < math.radians(2.0 * math.pi):
+            degrees = so3.exponential(vector * (180.0 / math.pi))
+            km, left = track.misfit_km(at, track.turns[at]), track.misfit_km(at, degrees)
+            if left * BETTER_BY < km:
+                yield Slip(at, at, "radians", degrees[np.newaxis], km, left)
+
+
+def _turned_round(track: Track) -> Iterator[Slip]:
+    """Runs of rows that are on the others' path with their signs changed, judged at their ends."""
+    for first, last in turned_runs(track.ages, track.turns):
+        turns = so3.conjugate(track.turns[first : last + 1])
+        slip = Slip(first, last, "sign", turns, 0.0, 0.0)
+        undone = slip.undone(track)
+        km, left = max(
+            (undone.misfit_km(at, track.turns[at]), undone.misfit_km(at, undone.turns[at]))
+            for at in {first, last}
+        )
+        # the present is its own mirror image: there is no jump from it to a row that is turned
+        ends = [end for end in (first, last + 1) if 1 < end < len(track.ages)]
+        jumps = [[roughness(t.ages, t.turns, end) for t in (track, undone)] for end in ends]
+        clear = all(after * BETTER_BY < before for before, after in jumps)
+        if km >= MISFIT_KM and left * BETTER_BY < km and (first == last or (ends and clear)):
+            yield replace(slip, km=km, left_km=left)
 
 
 def tables_in_radians(history: History, tracks: Sequence[Track]) -> Iterator[Finding]:
