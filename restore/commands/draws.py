@@ -26,7 +26,7 @@ def draws(history_file: str, count: int, seed: int, out: str) -> None:
     from restore.errors import InputError
     from restore.history.drawn import drawn_history, drawn_rotations, undrawn
 
-    history = read_history(history_file)
+    history = read_history(history_file, mixed=True)
     folder = Path(out)
     if folder.exists():
         raise InputError(f"{out}: is there already; name a new folder")

@@ -76,7 +76,7 @@ def isochrons(
     from restore.motion.flowlines import Spreading
     from restore.motion.isochrons import densified_line, read_ridge
 
-    history, clock = one_clock(read_history(history_file), time_scale, None)
+    history, clock = one_clock(read_history(history_file, mixed=True), time_scale, None)
     named = _named_ages(chrons, clock)
     ages = tuple(sorted(named)) if named else ages
     asked = (0.0,) if observed is not None and ages is None else need_ages(ages)

@@ -62,7 +62,7 @@ def differences(first: str, second: str, out: str | None) -> None:
     from restore.history.differences import differences as between
     from restore.scenario.provenance import provenance
 
-    histories = [read_history(file) for file in (first, second)]
+    histories = [read_history(file, mixed=True) for file in (first, second)]
     inputs = [
         file for path, h in zip((first, second), histories, strict=True) for file in history_inputs(path, h)
     ]

@@ -160,12 +160,18 @@ def make_layout(
         raise click.UsageError(str(exc)) from None
 
 
-def read_history(path: str) -> History:
-    """Read a history and say its warnings on standard error."""
+def read_history(path: str, mixed: bool = False) -> History:
+    """Read a history and say its warnings on standard error.
+
+    Unless `mixed`, tables on several clocks are refused: ages of one must not meet those of another.
+    """
+    from restore.history.redate import clock_of
     from restore.history.store import History
 
     history = History.read(path)
     say_findings(history.findings)
+    if not mixed:
+        clock_of(history, None)
     return history
 
 

@@ -53,7 +53,7 @@ def _history(file: str, own: Any, to: Any, out: str | None) -> int:
     from restore.files.tables import TableOut
     from restore.history.redate import redate as restate
 
-    history = read_history(file)
+    history = read_history(file, mixed=True)
     done = restate(history, to, own)
     say_findings(done.findings)
     rows = done.history.rows

@@ -92,7 +92,7 @@ def sites(
     from restore.motion.sites import SiteJob
     from restore.scenario.provenance import provenance
 
-    history, clock = one_clock(read_history(history_file), time_scale, table_time_scale)
+    history, clock = one_clock(read_history(history_file, mixed=True), time_scale, table_time_scale)
     history = riding(history, rides)
     ground = make_ground(outlines, plate_property, edges, within_km, crust_age, latitudes)
     job = SiteJob(

@@ -170,6 +170,12 @@ def _check_values(
     if values.get("rates_hold_to_ma") == 0:
         what = "rates_hold_to_ma = 0"
         findings.append(_fault(document, what, "must be above 0", *path, "rates_hold_to_ma"))
+    span = [
+        values.get(key, default) for key, default in (("valid_from_ma", 0.0), ("valid_to_ma", math.inf))
+    ]
+    if all(isinstance(age, (int, float)) for age in span) and not span[0] <= span[1]:
+        what = f"valid_from_ma = {span[0]:g} is above valid_to_ma = {span[1]:g}"
+        findings.append(_fault(document, what, "the younger age comes first", *path, "valid_from_ma"))
     for key, allowed in CHOICES.items():
         if isinstance(values.get(key), str) and values[key] not in allowed:
             hint = "must be one of " + ", ".join(allowed)

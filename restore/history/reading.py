@@ -80,6 +80,9 @@ class _TableReading:
         columns: dict[str, int] = {}
         self.reader.expect(KNOWN_COLUMNS)
         for name in (*NUMBERS, *TEXTS):
+            if name in self.constants and self.reader.column(name, required=False) is not None:
+                header = f"{self.reader.file}:{self.reader.header_line}"
+                raise TableError(f"{header}: {name} is a constant of the manifest and a column; keep one")
             required = name in {"plate", "relative_to"} and name not in self.constants
             place = self.reader.column(name, required=required)
             if place is not None:

@@ -270,6 +270,6 @@ def clock_of(history: History, name: str | None, folder: str = ".") -> TimeScale
     if len(named) > 1:
         raise HistoryError(
             f"the tables of the history are on {len(named)} clocks ({', '.join(named)}); name one time scale"
-            " for the run"
+            " for the run, or restate it first (redate)"
         )
     return TimeScale.read(named[0]) if named else None

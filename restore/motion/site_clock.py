@@ -95,13 +95,14 @@ class SiteClock:
         for row, text in enumerate(chunk.columns[column]):
             if not text.strip() or bad_age[row]:
                 continue
+            said = "" if fractions is None else chunk.columns[fractions][row]
             try:
-                said = "" if fractions is None else chunk.columns[fractions][row]
                 fraction = parse_number(said, decimal) if said.strip() else math.nan
                 ages[row], how[row] = self.to.age_of(Chron.parse(text, fraction)), "chron"
             except (InputError, ValueError) as exc:
                 bad_age[row] = True
-                place = chunk.place(row, column)
-                what = str(exc) if isinstance(exc, InputError) else f"chron_fraction {exc} is not a number"
+                named = isinstance(exc, InputError)
+                what = str(exc) if named else f"chron_fraction = {said!r} is not a number"
+                place = chunk.place(row, column if named else fractions)
                 findings.append(Finding("error", "chron", place, what))
         numbers["age_ma"] = ages

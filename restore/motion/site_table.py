@@ -140,7 +140,7 @@ class SiteReader:
                         findings.append(fault)
                     said[name][row] = True
         if self.clock is not None:
-            self.clock.restate(chunk, self.at, numbers, bad["age"], findings)
+            self.clock.restate(chunk, self.at, numbers, bad["age"], findings, decimal)
         self._check_ranges(chunk, numbers, bad, said, findings)
         labels = self.at["plate"]
         plate = [""] * count if labels is None else [text.strip() for text in chunk.columns[labels]]

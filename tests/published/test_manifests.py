@@ -422,7 +422,7 @@ def test_one_file_for_a_published_history(tmp_path: Path) -> None:
     place = Circuit(back, "nam").rotations("afr", 118.0).rotations.apply(unit(20.8, -17.0)).ravel()
     lat = float(np.rad2deg(np.arctan2(place[2], np.hypot(*place[:2]))))
     lon = float(np.rad2deg(np.arctan2(place[1], place[0])))
-    # CASES: M0 takes Cap Blanc 20.8N 17W to 27.302395 -58.167059 (a separate small program, not published)
+    # M0 takes Cap Blanc 20.8N 17W to 27.302395 -58.167059 (a separate small program, not published)
     assert apart_km(lat, lon, 27.302395, -58.167059) < 1e-4
 
 

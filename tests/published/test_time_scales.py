@@ -237,7 +237,7 @@ def test_restating_changes_ages_and_nothing_else() -> None:
     assert {moved.how for moved in done.moved} == {"chron"}
     assert {table.time_scale for table in done.history.tables} == {"gts2012"}
     m0 = next(m for m in done.moved if m.before_ma == 118.0)
-    # 7.93 Myr at the stage's 0.754 deg/Myr (CASES: worked case) are 665 km at most on the globe
+    # 7.93 Myr at the stage's 0.754 deg/Myr (the worked case above) are 665 km at most on the globe
     assert m0.km == pytest.approx((125.93 - 118.0) * math.radians(0.754) * 6371.0088, rel=1e-3)
 
 

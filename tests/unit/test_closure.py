@@ -1,4 +1,7 @@
-"""Closure of a loop of plates: the rotation left over, against scipy; whether errors explain it."""
+"""Closure of a loop of plates: the rotation left over, against scipy; whether errors explain it.
+
+At the end: which pairs of a loop the circuit uses, against a forest grown anew for every piece of time.
+"""
 
 import math
 
@@ -8,6 +11,7 @@ from scipy.spatial.transform import Rotation, Slerp
 from scipy.stats import chi2, f, kstest
 
 from restore.errors import HistoryError, InputError, OutsideHistoryError
+from restore.history.circuit import Circuit
 from restore.history.closure import closure
 from restore.history.conventions import Table
 from restore.history.rows import Row
@@ -225,3 +229,66 @@ def test_an_unknown_plate():
     """A plate that the history lacks is named, with a hint."""
     with pytest.raises((InputError, HistoryError, KeyError), match="'x' is not in the history"):
         closure(loop(), ["x", "b", "c"], 10.0)
+
+
+def still(rng, count):
+    """Pairs of plates that all stand still, at random ages and ranks: every loop of them closes."""
+    tables = [Table(rank=rank) for rank in range(3)]
+    rows = {}
+    for _ in range(count):
+        plate, partner = (f"p{n}" for n in rng.choice(6, 2, replace=False))
+        table = int(rng.integers(3))
+        for age in sorted(set(rng.integers(0, 8, 2).tolist())):
+            rows[plate, partner, table, age] = Row(plate, partner, float(age), 0.0, 0.0, 0.0, table=table)
+    return History.from_rows(list(rows.values()), tables)
+
+
+def grown(circuit, holding, late):
+    """The chains of a forest that is grown anew: pairs by rank, then by number, those that only begin last."""
+    pairs = circuit.pairs
+    group = {plate: plate for plate in circuit.plates}
+    used = []
+    for members in (holding, late):
+        for n in sorted(members, key=lambda n: (pairs[n].rank, n)):
+            one, other = group[pairs[n].plate], group[pairs[n].relative_to]
+            if one != other:
+                group = {plate: other if its == one else its for plate, its in group.items()}
+                used.append(n)
+    chains, waiting = {circuit.frame: ()}, [circuit.frame]
+    while waiting:
+        here = waiting.pop()
+        for n in used:
+            ends = pairs[n].plate, pairs[n].relative_to
+            for there, partner, forward in ((*ends, True), (*reversed(ends), False)):
+                if partner == here and there not in chains:
+                    chains[there] = ((n, forward), *chains[here])
+                    waiting.append(there)
+    return chains
+
+
+@pytest.mark.parametrize("seed", range(40))
+def test_chains_against_a_forest_grown_anew(seed):
+    """In every piece of time each plate has the chain that a forest grown from nothing gives it.
+
+    The circuit follows one forest from piece to piece; at a cut the pairs of the younger piece hold,
+    and those that only begin there fill in.
+    """
+    rng = np.random.default_rng(seed)
+    history = still(rng, int(rng.integers(1, 18)))
+    circuit = Circuit(history, history.plates()[0])
+    pieces = circuit.pieces
+    for number in range(1, 2 * len(pieces.cuts) + 1):
+        cut = float(pieces.cuts[(number - 1) // 2])
+        ends = [(pair.youngest_ma, pair.oldest_ma) for pair in circuit.pairs]
+        if number % 2:
+            holding = [n for n, (young, old) in enumerate(ends) if young < cut <= old]
+            late = [n for n, (young, _) in enumerate(ends) if young == cut]
+        else:
+            holding, late = [n for n, (young, old) in enumerate(ends) if young <= cut < old], []
+        chains = grown(circuit, holding, late)
+        for code, plate in enumerate(circuit.plates):
+            chain = int(pieces.chain_of[code, number])
+            assert (chain >= 0) == (plate in chains)
+            if chain >= 0:
+                assert pieces.chains[chain] == chains[plate]
+    assert pieces.conflicts == ()

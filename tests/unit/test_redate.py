@@ -367,6 +367,15 @@ def test_sites_at_fault_lose_their_age_and_nothing_else(tmp_path):
     ]
 
 
+def test_a_fraction_that_is_no_number(tmp_path):
+    """The line names the column of the fraction and what stands there."""
+    _, findings = restated(tmp_path, "core,chron,chron_fraction\na,C6n,half\nb,C6n,2\n")
+    assert [finding.line().split("sites.csv:")[1] for finding in findings] == [
+        "2:3: chron_fraction = 'half' is not a number",
+        "3:2: chron_fraction = 2: must lie in 0..1, from the young edge",
+    ]
+
+
 def test_sites_without_a_clock(tmp_path):
     """Where the table's clock is not said, only chrons and the present date a row."""
     rows, findings = restated(tmp_path, "core,age_ma,chron\na,20,\nb,20,C6n(o)\nc,0,\n", own=None)
