@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import os
 from typing import TYPE_CHECKING, Any
 
@@ -26,7 +27,7 @@ if TYPE_CHECKING:
 
 @click.command()
 @click.argument("line")
-@pair_options
+@functools.partial(pair_options, clock=False)
 @ages_option(required=False)
 @click.option(
     "--chrons", metavar="LABELS", help="Chrons, such as C5n.2n(o),C6n(y); they need a time scale."

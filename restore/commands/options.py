@@ -81,12 +81,25 @@ class Age(click.ParamType[Any]):
         return age
 
 
-def history_option(required: bool = True) -> Callable[[Decorated], Decorated]:
-    """--history."""
-    return click.option(
-        "--history", "history_file", required=required, metavar="FILE",
-        help="Rotation history: a .csv table, a .toml manifest or a .nc file.",
-    )  # fmt: skip
+def history_option(required: bool = True, clock: bool = True) -> Callable[[Decorated], Decorated]:
+    """--history, and with `clock` --time-scale, which `read_history` finds by itself."""
+
+    def decorate(command: Decorated) -> Decorated:
+        if clock:
+            command = click.option(
+                "--time-scale", metavar="SCALE", expose_value=False, callback=_remember_clock,
+                help="The one clock of the run; tables on another are restated to it.",
+            )(command)  # fmt: skip
+        return click.option(
+            "--history", "history_file", required=required, metavar="FILE",
+            help="Rotation history: a .csv table, a .toml manifest or a .nc file.",
+        )(command)  # fmt: skip
+
+    return decorate
+
+
+def _remember_clock(ctx: click.Context, _: click.Parameter, value: str | None) -> None:
+    ctx.meta["oncewhere.time_scale"] = value
 
 
 def radius_option(command: Decorated) -> Decorated:
@@ -161,18 +174,27 @@ def make_layout(
 
 
 def read_history(path: str, mixed: bool = False) -> History:
-    """Read a history and say its warnings on standard error.
+    """Read a history on the clock that --time-scale names, and say its warnings on standard error.
 
-    Unless `mixed`, tables on several clocks are refused: ages of one must not meet those of another.
+    Unless `mixed`, tables on several clocks are refused if no clock is named: ages of one must not meet
+    those of another.
     """
     from restore.history.redate import clock_of
+    from restore.history.redate import one_clock as restated
     from restore.history.store import History
 
     history = History.read(path)
     say_findings(history.findings)
-    if not mixed:
-        clock_of(history, None)
-    return history
+    context = click.get_current_context(silent=True)
+    name = None if context is None else context.meta.get("oncewhere.time_scale")
+    if mixed and name is None:
+        return history
+    scale = clock_of(history, name)
+    if scale is None or name is None:
+        return history
+    done = restated(history, scale)
+    say_findings(done.findings)
+    return done.history
 
 
 def one_clock(

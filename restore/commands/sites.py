@@ -30,7 +30,7 @@ FRAME_KINDS = ("plate", "mantle", "spin-axis")
 
 @click.command()
 @click.argument("table")
-@history_option()
+@history_option(clock=False)
 @click.option("--frame", required=True, help="The plate or frame that positions are given in.")
 @click.option("--frame-kind", type=click.Choice(FRAME_KINDS), help="Kind of the frame, if the history"
               " does not say.")  # fmt: skip
@@ -94,6 +94,11 @@ def sites(
 
     history, clock = one_clock(read_history(history_file, mixed=True), time_scale, table_time_scale)
     history = riding(history, rides)
+    stated = history.frames.get(frame)
+    if frame_kind is not None and stated not in {None, frame_kind}:
+        raise click.UsageError(
+            f"--frame-kind {frame_kind}: the history says that {frame} is of kind {stated}"
+        )
     ground = make_ground(outlines, plate_property, edges, within_km, crust_age, latitudes)
     job = SiteJob(
         Circuit(history, frame, beyond),

@@ -61,11 +61,13 @@ class Share(click.ParamType[Any]):
         return share
 
 
-def pair_options(command: Decorated) -> Decorated:
-    """The options of every command about what two plates made between them."""
+def pair_options(command: Decorated, clock: bool = True) -> Decorated:
+    """The options of every command about what two plates made between them; without `clock`, the command
+    has its own --time-scale.
+    """
     options: tuple[Callable[[Any], Any], ...] = (
         click.option("--between", required=True, type=Pair(), help="The two plates that part."),
-        history_option(),
+        history_option(clock=clock),
         click.option("--share", type=Share(), default=0.5, show_default=True,
                      help="The part of new crust that A, the first plate, keeps: a number, or a table"
                      " younger_ma, older_ma, share."),

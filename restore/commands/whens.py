@@ -72,6 +72,9 @@ def when(
 ) -> None:
     """All ages at which something happened to a site, with their errors from the rows.
 
+    What happened is said forward in time. A site is searched as far back as --during says: give the age
+    of its crust there.
+
     \b
     oncewhere when --site 10,-30,ovrath --during 0:120 --latitude 12 \\
         --history scenario_files/history.toml --frame deep
@@ -110,7 +113,9 @@ def when(
         events = questions.near_lines(
             circuit, asker, lines, line_plate, *during, within_km, kind, radius_km
         )
-    columns = questions.as_columns([(f"{site[0]:g},{site[1]:g},{site[2]}", event) for event in events])
+    name = f"{site[0]:g},{site[1]:g},{site[2]}"
+    events = events or [questions.NEVER]
+    columns = questions.as_columns([(name, event) for event in events])
     said = {"frame": frame, "frame_kind": history.kind_of(frame), "latitudes": latitudes}
     said["errors"] = "error of rows only"
     columns |= {name: [text] * len(events) for name, text in said.items()}

@@ -33,8 +33,12 @@ def decimals_of(name: str) -> int | None:
     """Decimals that a column is written with: 1e-10 degrees are 0.01 mm, 1e-6 km a millimetre."""
     if name.endswith("_deg"):
         return 10
-    if name.endswith(("_km", "_mm_yr", "_dof")):
+    if name.endswith(("_ma", "_myr")):
+        return 9
+    if name.endswith(("_km", "_km2", "_mm_yr", "_dof")):
         return 6
+    if name in {"probability", "statistic", "obliquity_deg"}:
+        return 10
     return None
 
 
@@ -119,6 +123,7 @@ class TableOut:
 
     def add(self, columns: Columns) -> None:
         """Write some rows, given by column; every piece has the same columns."""
+        columns = honest_errors(columns)
         if self._stream is None:
             self.pieces.append(dict(columns))
             return
@@ -245,6 +250,20 @@ class TableOut:
         layer = Path(str(self.path)).stem
         table.to_file(content, driver="GPKG", layer=layer, dataset_metadata=metadata)
         part.write_bytes(content.getvalue())
+
+
+def honest_errors(columns: Columns) -> Columns:
+    """Columns whose `errors` says `not known` in rows that have no sigma at all."""
+    sigmas = [
+        values
+        for name, values in columns.items()
+        if "_sigma_" in name and isinstance(values, np.ndarray) and values.dtype.kind == "f"
+    ]
+    if "errors" not in columns or not sigmas:
+        return columns
+    bare = np.all([np.isnan(values) for values in sigmas], axis=0)
+    said = ["not known" if none else text for none, text in zip(bare, columns["errors"], strict=True)]
+    return {**columns, "errors": said}
 
 
 def _as_numbers(name: str, values: list[Any]) -> list[Any] | np.ndarray:

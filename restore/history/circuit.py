@@ -37,13 +37,21 @@ class Circuit:
     """The chains of a history to one frame, decided once when it is built.
 
     `frame`: any label of the history. `beyond`: what happens past the oldest age of a plate's chain:
-    `refuse`, `hold` the last rotation, or `extend` the last stage. Raises UnknownPlateError for a
-    frame that the history lacks and InputError for another `beyond`.
+    `refuse`, `hold` the last rotation, or `extend` the last stage. `mixed_clocks` lets tables on
+    several time scales meet, as an audit must. Raises UnknownPlateError for a frame that the history lacks,
+    InputError for another `beyond` or for mixed clocks.
     """
 
-    def __init__(self, history: History, frame: str, beyond: str = "refuse") -> None:
+    def __init__(
+        self, history: History, frame: str, beyond: str = "refuse", mixed_clocks: bool = False
+    ) -> None:
         if beyond not in BEYOND:
             raise InputError(f"beyond = {beyond!r}: must be one of {', '.join(BEYOND)}")
+        clocks = sorted({table.time_scale for table in history.tables if table.time_scale})
+        if len(clocks) > 1 and not mixed_clocks:
+            raise InputError(
+                f"the history is on {len(clocks)} clocks ({', '.join(clocks)}); restate it to one time scale"
+            )
         self.history = history
         self.frame = frame
         self.beyond = beyond

@@ -10,36 +10,58 @@ import numpy as np
 from restore.geometry.sphere import EARTH_RADIUS_KM
 from restore.history.store import History
 
-COLUMNS = ("plate", "relative_to", "age_ma", "what", "km", "first_row", "second_row")
+COLUMNS = ("plate", "relative_to", "age_ma", "what", "km", "moved_myr", "first_row", "second_row")
 
 
 def differences(first: History, second: History) -> dict[str, list[Any]]:
     """Rows that stand in one history only, or in both with another rotation or error, as columns.
 
-    `what`: `only in the first`, `only in the second`, `rotation`, `covariance`. `km`: the greatest
-    distance on the globe between the two rotations, None where there is no second one. Rows are
-    matched by pair and age, in the order of the first history, then of the second.
+    `what`: `only in the first`, `only in the second`, `age`, `rotation`, `covariance`. `km`: the greatest
+    distance on the globe between the two rotations, None where there is no second one; `moved_myr`: by
+    how much the age differs. Rows are matched by pair and age, and those left over by pair and the line
+    that they came from, in the order of the first history, then of the second.
     """
     keys = [_keys(history) for history in (first, second)]
-    apart = _apart_km(
-        first, second, [(row, keys[1][key]) for key, row in keys[0].items() if key in keys[1]]
-    )
+    matched = {row: keys[1][key] for key, row in keys[0].items() if key in keys[1]}
+    matched |= _by_line(first, second, matched)
+    apart = _apart_km(first, second, list(matched.items()))
     records: list[tuple[Any, ...]] = []
     for key, row in keys[0].items():
-        if key not in keys[1]:
-            records.append((*key[:3], "only in the first", None, first.place_of(row), ""))
+        if row not in matched:
+            records.append((*key[:3], "only in the first", None, None, first.place_of(row), ""))
             continue
-        other = keys[1][key]
-        km = apart[row]
-        places = (first.place_of(row), second.place_of(other))
-        if km > 1e-6:
-            records.append((*key[:3], "rotation", km, *places))
-        elif not np.array_equal(first.rows.covariance[row], second.rows.covariance[other], equal_nan=True):
-            records.append((*key[:3], "covariance", km, *places))
+        other, km = matched[row], apart[row]
+        moved = float(second.rows.age_ma[other] - first.rows.age_ma[row])
+        same = np.array_equal(first.rows.covariance[row], second.rows.covariance[other], equal_nan=True)
+        what = "age" if moved else "rotation" if km > 1e-6 else "" if same else "covariance"
+        if what:
+            records.append(
+                (*key[:3], what, round(km, 6), round(moved, 9), first.place_of(row), second.place_of(other))
+            )
+    known = set(matched.values())
     for key, row in keys[1].items():
-        if key not in keys[0]:
-            records.append((*key[:3], "only in the second", None, "", second.place_of(row)))
+        if row not in known:
+            records.append((*key[:3], "only in the second", None, None, "", second.place_of(row)))
     return {name: [record[i] for record in records] for i, name in enumerate(COLUMNS)}
+
+
+def _by_line(first: History, second: History, matched: dict[int, int]) -> dict[int, int]:
+    """Rows without a match that came from the same line of a table: a restated row is the same row."""
+
+    def origin(history: History, row: int) -> tuple[str, str, str]:
+        return (history.rows.plate[row], history.rows.relative_to[row], history.place_of(row))
+
+    taken = set(matched.values())
+    left = {
+        origin(second, row): row
+        for row in range(len(second))
+        if row not in taken and int(second.rows.line[row]) > 0
+    }
+    return {
+        row: left[origin(first, row)]
+        for row in range(len(first))
+        if row not in matched and origin(first, row) in left
+    }
 
 
 def _keys(history: History) -> dict[tuple[str, str, float, int], int]:

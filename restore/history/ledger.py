@@ -141,7 +141,12 @@ class Ledger:
 
     def words(self, item: int = 0) -> Iterator[str]:
         """The ledger of one result in words, one line per link and two per row."""
-        for record in self.links_of(item):
+        links_ = self.links_of(item)
+        if len(links_) > 1:
+            yield "chain: link 1 acts first; the result is " + " * ".join(
+                f"link {record['link']}" for record in reversed(links_)
+            )
+        for record in links_:
             turned = ", the pair turned round" if record["turned_round"] else ""
             pole = "zero rotation"
             if record["pole_lat_deg"] is not None:
@@ -157,8 +162,10 @@ class Ledger:
                 row = record[side]
                 share = row["variance_share"]
                 known = "share of variance not known" if share is None else f"{share:.1%} of the variance"
-                yield f"    {side} row {row['age_ma']:g} Ma, {row['file']}:{row['line']}: {known}"
-                said = [row[name] for name in ("printed", "chron", "reference", "note") if row[name]]
+                where = ":".join(str(row[name]) for name in ("file", "line") if row[name]) or "no line"
+                yield f"    {side} row {row['age_ma']:g} Ma, {where}: {known}"
+                names = ("printed", "chron", "reference", "citation", "note")
+                said = [row[name] for name in names if row[name]]
                 if said:
                     yield "        " + " | ".join(said)
             yield f"    fraction between them {record['fraction']:.10f}"
@@ -166,7 +173,7 @@ class Ledger:
 
 ROW_NAMES = (
     *("file", "line", "age_ma", "pole_lat_deg", "pole_lon_deg", "angle_deg"),
-    *("printed", "chron", "reference", "note"),
+    *("printed", "chron", "reference", "note", "citation"),
 )
 
 
@@ -217,6 +224,7 @@ def row_record(circuit: Circuit, number: int) -> dict[str, Any]:
             "chron": "",
             "reference": "",
             "note": "zero at the present by the table's from_present",
+            "citation": "",
         }
     row = history.rows.row(number)
     zero = row.angle_deg == 0.0
@@ -231,6 +239,7 @@ def row_record(circuit: Circuit, number: int) -> dict[str, Any]:
         "chron": row.chron,
         "reference": row.reference,
         "note": row.note,
+        "citation": history.tables[row.table].citation,
     }
 
 

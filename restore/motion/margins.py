@@ -42,13 +42,15 @@ _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(8)
 class MarginLine:
     """Segments of today's line: ends (n, 3), which line each is of, and on which side the first plate is.
 
-    `first_on_left` (n,): whether the first plate lies to the left of the segment as drawn.
+    `first_on_left` (n,): whether the first plate lies to the left of the segment as drawn; `side_from`: how
+    that is known, `given`, `outlines` or `assumed`.
     """
 
     start: Floats
     end: Floats
     line: NDArray[np.int64]
     first_on_left: NDArray[np.bool_]
+    side_from: str = "given"
 
     @property
     def middle(self) -> Floats:
@@ -96,10 +98,12 @@ def margin_line(
     if left is not None:
         if left not in between:
             raise InputError(f"left = {left!r}: must be one of {' and '.join(between)}")
-        on_left = np.full(len(line), left == between[0])
+        on_left, side_from = np.full(len(line), left == between[0]), "given"
     elif outlines is not None:
-        on_left = _side_by_outlines(segments, between, outlines)
-    return MarginLine(start, end, line, on_left)
+        on_left, side_from = _side_by_outlines(segments, between, outlines), "outlines"
+    else:
+        side_from = "assumed"
+    return MarginLine(start, end, line, on_left, side_from)
 
 
 def _left_normal(segments: MarginLine) -> Floats:
@@ -279,6 +283,7 @@ def margin_table(
     for name in tables[0]:
         values = np.concatenate([np.asarray(table[name]) for table in tables])[order]
         columns[name] = values if values.dtype.kind == "f" else values.tolist()
+    columns |= _sides(between, line, order % len(line.line))
     return columns | _said(between, at_on, kind, len(order), "error of rows only")
 
 
@@ -311,7 +316,14 @@ def margin_totals_table(
     columns["crust"] = [
         "made" if area > 0.0 else "consumed" if area < 0.0 else "" for area in totals["area_km2"]
     ]
+    columns |= _sides(between, line, np.arange(count))
     return columns | _said(between, at_on, kind, count, "not known")
+
+
+def _sides(between: tuple[str, str], line: MarginLine, segments: NDArray[np.int64]) -> dict[str, list[str]]:
+    """Which plate lies to the left of each segment as drawn, and how that is known."""
+    left = [between[0] if on_left else between[1] for on_left in line.first_on_left[segments].tolist()]
+    return {"left_plate": left, "side_from": [line.side_from] * len(left)}
 
 
 def _said(

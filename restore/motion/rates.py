@@ -114,6 +114,10 @@ def rates(
     """
     if at_on not in AT_ON:
         raise InputError(f"at_on = {at_on!r}: must be one of {', '.join(AT_ON)}")
+    if plate == relative_to:
+        raise InputError(
+            f"plate and relative_to are both {plate!r}: a plate does not move relative to itself"
+        )
     kind = latitudes or Latitudes()
     lat, lon, age = np.broadcast_arrays(
         *(np.atleast_1d(np.asarray(a, dtype=np.float64)) for a in (lat_deg, lon_deg, age_ma))

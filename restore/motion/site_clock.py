@@ -20,12 +20,15 @@ AGES = ("age_ma", "age_young_ma", "age_old_ma", "host_age_ma")
 class SiteClock:
     """Restates the ages of site tables from their own time scale, if they name one, to the run's.
 
+    `most_myr`: the most that an age has moved by so far, Myr.
+
     Raises InputError if ages between the two scales cannot be restated at all.
     """
 
     def __init__(self, to: TimeScale, own: TimeScale | None = None) -> None:
         self.to = to
         self.restatement = None
+        self.most_myr = 0.0
         if own is not None and own.name != to.name and not own.same_as(to):
             self.restatement = Restatement.between(own, to)
 
@@ -46,7 +49,10 @@ class SiteClock:
         how = [""] * len(chunk)
         if self.restatement is not None:
             for name in AGES:
+                before = np.array(numbers[name])
                 self._interpolate(name, chunk, at, numbers, bad_age, findings, how)
+                moved = np.abs(numbers[name] - before)
+                self.most_myr = max(self.most_myr, float(np.nanmax(moved, initial=0.0)))
         column = at.get("chron")
         if column is not None:
             self._by_chron(chunk, at, column, numbers, bad_age, findings, how, decimal)

@@ -16,7 +16,7 @@ from restore.errors import InputError
 from restore.files.atomic import check_target, refuse_input, whole_file
 from restore.files.delimited import DelimitedReader, Layout
 from restore.files.tables import TableOut, csv_text
-from restore.findings import Finding
+from restore.findings import Finding, Place
 from restore.history.circuit import Circuit
 from restore.history.ledger import Segment, entries
 from restore.motion.site_table import SiteReader
@@ -73,6 +73,11 @@ def restore_file(
                 if in_full:
                     written_out.add(results)
                 advance(reader.bytes_read())
+    if job.clock is not None and job.clock.restatement is not None:
+        clock = job.clock.restatement
+        what = f"ages restated from {clock.older.name} to {clock.newer.name}: up to {job.clock.most_myr:.3g} Myr"
+        done.findings.append(Finding("note", "restated", Place(os.fspath(table)), what))
+        say(done.findings[-1:])
     if ledger_file is not None:
         write_ledger(ledger_file, job.circuit, done.segments, written_out.results, provenance)
     return done

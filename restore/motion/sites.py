@@ -298,7 +298,8 @@ class _Restoring:
             dof = np.where(reached & np.isfinite(nu) & ~np.isnan(axes[0]), nu, np.nan)
         columns["ellipse_major_km"], columns["ellipse_minor_km"] = axes[0], axes[1]
         columns["ellipse_azimuth_deg"], columns["ellipse_dof"] = axes[2], dof
-        columns["errors"] = self._error_words(axes[0], repeat)
+        words = self._error_words(axes[0], repeat)
+        columns["errors"] = [word if ok else "" for word, ok in zip(words, reached.tolist(), strict=True)]
         columns["status"] = [STATUSES[code] for code in status.tolist()]
         return columns
 
@@ -312,7 +313,7 @@ class _Restoring:
         words = ("rows only", "rows, age", "rows, site", "rows, site, age")
         said = np.repeat(2 * place + age, repeat).tolist()
         known = (~np.isnan(major)).tolist()
-        return [words[code] if ok else "" for code, ok in zip(said, known, strict=True)]
+        return [words[code] if ok else "not known" for code, ok in zip(said, known, strict=True)]
 
     def _add_ranges(self, results: dict[str, Any], status: NDArray[np.int8]) -> None:
         """The two ends of an age range and the length of the path between them.
@@ -378,7 +379,7 @@ class _Restoring:
     def _add_remarks(
         self, results: dict[str, Any], asked: Floats, status: NDArray[np.int8], repeat: int
     ) -> None:
-        remarks = np.full(len(status), "", dtype=object)
+        remarks = np.repeat(self._causes(), repeat)
         if self.own_ages:
             middle = self.table.ranged & np.isnan(self.table.numbers["age_ma"])
             remarks[middle & (status == REACHED)] = "age is the middle of its range"
@@ -402,8 +403,21 @@ class _Restoring:
             ("frame", self.circuit.frame),
             ("frame_kind", self.job.frame_kind),
             ("latitudes", self.job.latitudes.kind),
+            *([("time_scale", self.job.clock.to.name)] if self.job.clock is not None else []),
         ):
             results[name] = [value] * len(status)
+
+    def _causes(self) -> NDArray[np.object_]:
+        """Why a row could not be read, or that its plate is not in the history; else empty."""
+        causes = np.full(len(self.table), "", dtype=object)
+        row_of = {line: row for row, line in enumerate(self.table.lines)}
+        for finding in self.table.findings:
+            row = row_of.get(finding.place.line or -1)
+            if row is not None and not causes[row]:
+                causes[row] = finding.what
+        for row in np.flatnonzero((self.codes < 0) & (self.fault == REACHED)).tolist():
+            causes[row] = f"plate {self.plate[row]!r} is not in the history"
+        return causes
 
     def _ledger(self, codes: NDArray[np.int64], asked: Floats, status: NDArray[np.int8]) -> Ledger:
         chain, _, used = self.circuit.find(codes, asked)

@@ -328,8 +328,13 @@ def near_lines(
     return _distance_events(track, measure, lambda age: float("nan"), within_km, radius_km)
 
 
+NEVER = Event(float("nan"), float("nan"), "never", float("nan"), float("nan"), float("nan"))
+
+
 def as_columns(events: list[tuple[str, Event]]) -> dict[str, Any]:
-    """Events as columns, each with the name of its site."""
+    """Events as columns, each with the name of its site; `what` is `never` where there was none. Crossings
+    are said as they happened, forward in time.
+    """
     names = ("age_ma", "age_sigma_myr", "what", "lat_deg", "lon_deg", "distance_km")
     columns: dict[str, Any] = {"site": [name for name, _ in events]}
     for name in names:

@@ -24,7 +24,8 @@ def label_faults(scenario: Scenario, history: History) -> list[Finding]:
     findings = []
     for path, label in named:
         if label not in known:
-            what = f"{'frame.' if path[0] == 'frame' else ''}{path[-1]} = {label!r} is not in the history"
+            key = next(part for part in reversed(path) if isinstance(part, str))
+            what = f"{'frame.' if path[0] == 'frame' else ''}{key} = {label!r} is not in the history"
             place = scenario.document.place(*path)
             findings.append(Finding("error", "scenario", place, what, remedy=did_you_mean(label, known)))
     stated = history.frames.get(root.frame.name)

@@ -3,12 +3,15 @@
 from __future__ import annotations
 
 import functools
+import math
 from collections import Counter
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
+from restore.errors import InputError
+from restore.files.delimited import parse_number
 from restore.files.lines import read_lines
 from restore.files.points import beside, read_points
 from restore.files.tables import TableOut
@@ -34,7 +37,7 @@ from restore.motion.site_clock import SiteClock
 from restore.motion.site_files import restore_file
 from restore.motion.sites import SiteJob
 from restore.motion.trails import Hotspots, TrailMaker
-from restore.motion.when import as_columns, crosses_latitude, near_point
+from restore.motion.when import NEVER, Event, as_columns, crosses_latitude, near_point
 from restore.scenario import kinds
 from restore.scenario.schema import Scenario
 
@@ -217,10 +220,17 @@ def _(task: kinds.MarginTask, bench: Bench, trail: Mapping[str, Any]) -> Outcome
 @_do.register
 def _(task: kinds.WhenTask, bench: Bench, trail: Mapping[str, Any]) -> Outcome:
     own, lat, lon = read_points(bench.scenario.path(task.file), task.table.layout())
-    younger, older = task.during
-    events = []
+    younger = task.during[0]
+    events: list[tuple[str, Event]] = []
+    hosts = _optional_ages(task, own, "host_age_ma")
     for row, (one_lat, one_lon) in enumerate(zip(lat, lon, strict=True)):
         site = Site(one_lat, one_lon, own["plate"][row].strip())
+        name = own["site"][row] if "site" in own else str(row + 1)
+        # before its crust was there the site was nowhere
+        older = min(task.during[1], hosts[row])
+        if not older > younger:
+            events.append((name, replace(NEVER, what="crust not yet formed")))
+            continue
         if task.latitude is not None:
             found = crosses_latitude(bench.circuit, site, task.latitude, younger, older, bench.latitudes)
         else:
@@ -229,7 +239,24 @@ def _(task: kinds.WhenTask, bench: Bench, trail: Mapping[str, Any]) -> Outcome:
             found = near_point(
                 bench.circuit, site, point, younger, older, task.within_km, bench.latitudes, bench.radius_km
             )
-        name = own["site"][row] if "site" in own else str(row + 1)
-        events += [(name, event) for event in found]
+        events += [(name, event) for event in found or [NEVER]]
     words = {**bench.words(), "errors": "error of rows only"}
     return _table(task, bench, trail, as_columns(events), words)
+
+
+def _optional_ages(task: kinds.Task, own: Mapping[str, list[str]], name: str) -> list[float]:
+    """Ages (Ma) of a column of the user's, infinite where there is none.
+
+    Raises InputError for a value that is no number.
+    """
+    column = str(task.table.columns.get(name, name))
+    if column not in own:
+        return [math.inf] * len(next(iter(own.values())))
+    ages = []
+    for row, text in enumerate(own[column], start=1):
+        try:
+            age = parse_number(text, task.table.decimal)
+        except ValueError:
+            raise InputError(f"{task.file}: row {row}: {name} = {text!r} is not a number") from None
+        ages.append(math.inf if math.isnan(age) else age)
+    return ages

@@ -53,7 +53,7 @@ def test_from_a_history(ask):
     answer = ask("rates", *ALBA, "--at", "0,20", "--history", "history.csv")
     (row,) = answer.rows
     assert numbers(row, "east_mm_yr", "north_mm_yr") == pytest.approx([-KM_PER_DEGREE, 0.0], abs=1e-6)
-    assert (row["plate"], row["relative_to"], row["errors"]) == ("alba", "deep", "error of rows only")
+    assert (row["plate"], row["relative_to"], row["errors"]) == ("alba", "deep", "not known")
     assert [row[name] for name in RATES[-2:]] == ["", ""]
 
 

@@ -50,7 +50,7 @@ def test_ellipses_only_where_errors_are_known(restore):
     table = SITES + "a,0,0,10,alba\n"
     unknown = restore(table).rows[0]
     assert [unknown[name] for name in ADDED[3:6]] == ["", "", ""]
-    assert unknown["errors"] == ""
+    assert unknown["errors"] == "not known"
     known = restore(table, history="known.csv").rows[0]
     # at 10 Ma about 90N with variances (2, 3, 4)e-6: at 0N 0E north moves with y, east with z;
     # kappa was estimated with 20 degrees of freedom, k^2 = 2 F(0.95; 2, 20) = nu (0.05^(-2/nu) - 1)

@@ -243,7 +243,8 @@ def test_sites_on_the_run_s_clock(papers, ask, here):
     assert [age for age, _ in restored(answer)] == ["19.722", "19.722"]
     np.testing.assert_allclose([lon for _, lon in restored(answer)], 30.0, atol=1e-9)
     notes = [line for line in answer.said if line.startswith("note: ")]
-    assert len(notes) == 3
+    assert len(notes) == 4
+    assert "sites.csv: ages restated from ck95 to gts2004: up to 0.409 Myr" in notes[-1]
     assert notes[0].startswith("note: young.csv:3: restated from ck95 to gts2004: up to 0.378 Myr")
     assert " km)" in notes[0]
 
@@ -316,7 +317,7 @@ def test_a_scenario_has_one_clock(papers, ask, here):
     np.testing.assert_allclose([float(row["restored_lon_deg"]) for row in rows], 30.0, atol=1e-9)
     findings = rows_of((here / "results" / "findings.csv").read_text(encoding="utf-8"))
     notes = [row for row in findings if row["kind"] == "restated"]
-    assert [row["line"] for row in notes] == ["3", "3", "3"]
+    assert [row["line"] for row in notes] == ["3", "3", "3", ""]
     assert all(float(row["km"]) >= 0.0 for row in notes)
 
 

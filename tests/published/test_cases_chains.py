@@ -124,9 +124,7 @@ def test_a_partner_change_is_reached_from_both_sides() -> None:
         assert restored(shuffled, "P", "A", age, (0.0, 90.0)) == place
 
 
-WAYS = list(
-    product([False, True], ["no", "inverse", "holds", "mapped"], [False, True], [False, True])
-)
+WAYS = list(product([False, True], ["no", "inverse", "holds", "mapped"], [False, True], [False, True]))
 
 
 def typed(turned: bool, listed: str, sign: bool, antipode: bool) -> tuple[str, str]:
@@ -215,9 +213,7 @@ def test_stage_poles_lie_1193_km_apart(klitgord: History) -> None:
 
 def test_the_older_pole_of_a_stage_comes_first(klitgord: History) -> None:
     """A stage asked from younger to older is refused."""
-    with pytest.raises(
-        InputError, match=r"stage from 84 to 118 Ma: the first age must be the older"
-    ):
+    with pytest.raises(InputError, match=r"stage from 84 to 118 Ma: the first age must be the older"):
         stage_pole(klitgord, AFRICA, AMERICA, 84.0, 118.0)
 
 

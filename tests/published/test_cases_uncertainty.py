@@ -35,17 +35,13 @@ def isotropic(sigma_km: float) -> np.ndarray:
 
 def matrix_6y() -> np.ndarray:
     """Marks, Stock & Quinn 1999, Table 2, row 6y (read), kappa applied, rad^2."""
-    row = next(
-        r for r in records("rotation_covariances_marks1999_table2.csv") if r["anomaly"] == "6y"
-    )
+    row = next(r for r in records("rotation_covariances_marks1999_table2.csv") if r["anomaly"] == "6y")
     a, b, c, d, e, f = (float(row[f"{letter}_10^-g_rad2"]) for letter in "abcdef")
     scale = 10.0 ** -float(row["g"]) / float(row["kappa_hat"])
     return np.array([[a, b, c], [b, d, e], [c, e, f]]) * scale
 
 
-def moved(
-    circuit: Circuit, plate: str, age_ma: float, place: tuple[float, float], **own: float
-) -> Moved:
+def moved(circuit: Circuit, plate: str, age_ma: float, place: tuple[float, float], **own: float) -> Moved:
     """One place of a plate, restored with its errors; `own`: position_sigma, age_sigma."""
     errors = {name: np.array([value]) for name, value in own.items()}
     points = Points(np.array([place[0]]), np.array([place[1]]), circuit.codes([plate]), **errors)
@@ -95,9 +91,7 @@ def test_rate_inside_two_rows(at_on: str) -> None:
     speed_sigma, azimuth_sigma = found.sigmas()
 
     assert speed_sigma[0] == pytest.approx(0.707, abs=0.0005)
-    assert azimuth_sigma[0] == pytest.approx(
-        math.degrees(0.7071 / float(found.speed_mm_yr[0])), rel=1e-3
-    )
+    assert azimuth_sigma[0] == pytest.approx(math.degrees(0.7071 / float(found.speed_mm_yr[0])), rel=1e-3)
     assert np.sqrt(found.covariance[0, 1, 1]) == pytest.approx(0.707, abs=0.0005)
 
 
@@ -142,9 +136,7 @@ def test_ellipse_if_the_matrix_were_left_alone() -> None:
     """
     row = Row("North_America", "Africa", 118.0, 66.3, -19.9, 54.25, matrix_6y())
     circuit = Circuit(History.from_rows([row]), "Africa")
-    major, minor, azimuth, _ = ellipse_of(
-        moved(circuit, "North_America", 118.0, (27.3024, -58.1671))
-    )
+    major, minor, azimuth, _ = ellipse_of(moved(circuit, "North_America", 118.0, (27.3024, -58.1671)))
 
     assert (major, minor) == pytest.approx((6.71, 3.74), abs=0.00501)
     assert azimuth == pytest.approx(66.6, abs=0.0501)
@@ -152,9 +144,7 @@ def test_ellipse_if_the_matrix_were_left_alone() -> None:
 
 def test_a_pair_turned_round_has_the_turned_covariance() -> None:
     """The rotation itself of the turned pair has C' = A C A^T, element by element (a law)."""
-    history = History.from_rows(
-        [Row("Africa", "North_America", 118.0, 66.3, -19.9, -54.25, matrix_6y())]
-    )
+    history = History.from_rows([Row("Africa", "North_America", 118.0, 66.3, -19.9, -54.25, matrix_6y())])
     a = Rotation.from_rotvec(unit(66.3, -19.9) * math.radians(-54.25)).as_matrix()
     found = Circuit(history, "Africa").at("North_America", 118.0).covariance()[0]
 
@@ -165,9 +155,7 @@ def test_a_pair_turned_round_has_the_turned_covariance() -> None:
 def test_halfway_to_the_only_row() -> None:
     """One row of 5 km at 20 Ma: a site at 10 Ma has a round ellipse of 6.12 km (small stage)."""
     rows = [Row("P", "F", 0.0, *NONE), Row("P", "F", 20.0, 90.0, 0.0, 1.0, isotropic(5.0))]
-    major, minor, _, dof = ellipse_of(
-        moved(Circuit(History.from_rows(rows), "F"), "P", 10.0, (0.0, 0.0))
-    )
+    major, minor, _, dof = ellipse_of(moved(Circuit(History.from_rows(rows), "F"), "P", 10.0, (0.0, 0.0)))
 
     assert (major, minor) == pytest.approx((6.12, 6.12), abs=0.00501)
     assert math.isinf(dof)
@@ -218,9 +206,7 @@ def test_an_unknown_row_spreads_to_what_uses_it_only() -> None:
     rows[2] = replace(rows[2], covariance=None)
     history = History.from_rows(rows)
     circuit = Circuit(history, "F")
-    sizes = [
-        ellipse_of(moved(circuit, "P", age, (10.0, 20.0)))[0] for age in (5.0, 10.0, 15.0, 20.0)
-    ]
+    sizes = [ellipse_of(moved(circuit, "P", age, (10.0, 20.0)))[0] for age in (5.0, 10.0, 15.0, 20.0)]
 
     assert np.isnan(sizes).tolist() == [False, False, True, True]
     assert sizes[1] == pytest.approx(5.0 * K_95, abs=1e-3)
@@ -241,24 +227,18 @@ def palaeopole_row(a95_deg: float) -> Row:
 
 def test_palaeolatitude_of_a_palaeopole() -> None:
     """The pole goes to the north pole; 30N 10E to latitude 10.2619, 90 less its distance."""
-    circuit = Circuit(
-        History.from_rows([palaeopole_row(5.0)], frames={"axis": "spin-axis"}), "axis"
-    )
+    circuit = Circuit(History.from_rows([palaeopole_row(5.0)], frames={"axis": "spin-axis"}), "axis")
     site = moved(circuit, "P", 60.0, (30.0, 10.0))
     pole = moved(circuit, "P", 60.0, (70.0, -160.0))
 
     assert site.lat_deg[0] == pytest.approx(10.2619, abs=0.501e-4)
-    assert site.lat_deg[0] == pytest.approx(
-        90.0 - arc_deg(unit(30.0, 10.0), unit(70.0, 200.0)), abs=1e-9
-    )
+    assert site.lat_deg[0] == pytest.approx(90.0 - arc_deg(unit(30.0, 10.0), unit(70.0, 200.0)), abs=1e-9)
     assert pole.lat_deg[0] == pytest.approx(90.0, abs=1e-9)
 
 
 def test_palaeolatitude_error_of_a_palaeopole() -> None:
     """A95 = 5 deg gives a palaeolatitude sigma of 2.043 deg, whatever the longitude's error."""
-    circuit = Circuit(
-        History.from_rows([palaeopole_row(5.0)], frames={"axis": "spin-axis"}), "axis"
-    )
+    circuit = Circuit(History.from_rows([palaeopole_row(5.0)], frames={"axis": "spin-axis"}), "axis")
     spread = moved(circuit, "P", 60.0, (30.0, 10.0)).spread
 
     assert math.degrees(math.sqrt(spread.north[0])) == pytest.approx(2.043, abs=0.0005)
@@ -308,9 +288,7 @@ def test_age_and_position_errors_do_not_make_the_rows_uncertain() -> None:
     assert dof == pytest.approx(10.0 * 25.0**2 / 16.0**2, rel=1e-9)
 
 
-def separation(
-    places: list[tuple[float, float]], plates: list[str], history: History
-) -> Sensitivity:
+def separation(places: list[tuple[float, float]], plates: list[str], history: History) -> Sensitivity:
     """How the cosine of the distance between two restored places moves with the rows' errors.
 
     `d(y1 . y2) = y2 . A1 (u1 x x1) + y1 . A2 (u2 x x2)`, with the sensitivities of both rotations.

@@ -103,9 +103,7 @@ def test_finite_poles_at_row_ages(row: dict[str, str]) -> None:
 
     assert record["pole_lat_deg"] == pytest.approx(-lat, abs=1e-9)
     assert math.cos(math.radians(record["pole_lon_deg"] - lon)) == pytest.approx(-1.0, abs=1e-12)
-    assert record["angle_deg"] == pytest.approx(
-        -float(row["angle_deg_anticlockwise_positive"]), abs=1e-9
-    )
+    assert record["angle_deg"] == pytest.approx(-float(row["angle_deg_anticlockwise_positive"]), abs=1e-9)
     assert record["covariance_rad2"] is None
 
 
@@ -215,9 +213,7 @@ def test_the_pair_holds_from_the_present_to_its_oldest_row() -> None:
 
     assert float(circuit.at("Africa", 0.0).rotations.angle_deg()) == 0.0
     assert circuit.oldest_ma("Africa") == 175.0
-    with pytest.raises(
-        OutsideHistoryError, match=r"at 175.1 Ma: outside the history; the chain holds"
-    ):
+    with pytest.raises(OutsideHistoryError, match=r"at 175.1 Ma: outside the history; the chain holds"):
         circuit.at("Africa", 175.1)
 
 
@@ -322,7 +318,5 @@ def test_a_misprinted_matrix_is_refused(tmp_path: Path) -> None:
     path = tmp_path / "marks.csv"
     text = path.read_text(encoding="utf-8").replace("1.25,3.11,", "1.25,-3.11,")
     path.write_text(text, encoding="utf-8")
-    with pytest.raises(
-        HistoryError, match=r"marks.csv:2:\d+: the covariance is not positive definite"
-    ):
+    with pytest.raises(HistoryError, match=r"marks.csv:2:\d+: the covariance is not positive definite"):
         History.read(write_manifest(tmp_path, table))

@@ -221,9 +221,7 @@ def test_ellipses_with_an_age_error(
     place, sigma = unit(33.0, 71.0), position_km / RADIUS_KM
     ages = 35.0 + age_sigma * rng.standard_normal(DRAWS)
     drawn = recompose(chain, ages, draw(rng, chain, DRAWS))
-    found, centre, covariance = moved(
-        circuit, place, 35.0, age_sigma=age_sigma, position_sigma=sigma
-    )
+    found, centre, covariance = moved(circuit, place, 35.0, age_sigma=age_sigma, position_sigma=sigma)
     steps = tangent_steps(centre, drawn.apply(sampled_site(rng, place, sigma)))
 
     assert HELD[0] < share_held(found, steps) < HELD[1]
@@ -273,9 +271,7 @@ def test_ellipses_from_a_table_with_kappa(tmp_path: Path) -> None:
         for row, (side, kappa) in enumerate(zip(sides, (0.06, 4.0), strict=True), start=1):
             lines.append(table_line(link, row, kappa, "", side))
             if side == "relative_to":
-                errors[at][row] = (
-                    Rotation.from_rotvec(link.vectors[row]).inv().apply(errors[at][row])
-                )
+                errors[at][row] = Rotation.from_rotvec(link.vectors[row]).inv().apply(errors[at][row])
     path = tmp_path / "kappa.csv"
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
     circuit, place = Circuit(History.read(path), "p2"), unit(-20.0, 140.0)

@@ -112,9 +112,7 @@ STAGES = [
 
 @pytest.mark.parametrize("coordinates", ["relative-to", "plate"])
 @pytest.mark.parametrize(("directions", "older", "younger"), STAGES)
-def test_stage_poles(
-    directions: tuple[bool, ...], older: float, younger: float, coordinates: str
-) -> None:
+def test_stage_poles(directions: tuple[bool, ...], older: float, younger: float, coordinates: str) -> None:
     """A stage from the older to the younger age, in coordinates of the partner or of the plate.
 
     Both ends are drawn with the same errors of the rows, so that shared rows cancel.
@@ -127,10 +125,7 @@ def test_stage_poles(
 
     check_pole(
         pole,
-        *(
-            product(old.inv(), young) if in_plate else product(young, old.inv())
-            for old, young in ends
-        ),
+        *(product(old.inv(), young) if in_plate else product(young, old.inv()) for old, young in ends),
     )
 
 
@@ -201,9 +196,7 @@ def around(directions: tuple[bool, ...], age_ma: float) -> tuple[Rotation, Rotat
     return now, before, after
 
 
-def velocities(
-    directions: tuple[bool, ...], age_ma: float, at_on: str
-) -> tuple[np.ndarray, np.ndarray]:
+def velocities(directions: tuple[bool, ...], age_ma: float, at_on: str) -> tuple[np.ndarray, np.ndarray]:
     """Draws of the point (draws, 3) and of its velocity in mm/yr, by central differences.
 
     Steps inside the stage just younger: less than 1e-6 of the velocity is lost.
@@ -211,9 +204,7 @@ def velocities(
     now, before, after = around(directions, age_ma)
     place = unit(33.0, 71.0)
     start = place if at_on == "plate" else now.inv().apply(place)
-    return now.apply(start), (after.apply(start) - before.apply(start)) * RADIUS_KM / (
-        2.0 * STEP_MYR
-    )
+    return now.apply(start), (after.apply(start) - before.apply(start)) * RADIUS_KM / (2.0 * STEP_MYR)
 
 
 def rate_found(directions: tuple[bool, ...], age_ma: float, at_on: str) -> Rates:
@@ -261,9 +252,7 @@ def drawn_pole(pole: Pole, error: np.ndarray, scale: float = 1.0) -> Pole:
     """The pole with its rotation off by an error, its covariance as estimated."""
     mean = Rotation.from_rotvec(unit(60.0, -39.0) * np.deg2rad(30.0))
     wxyz = (mean * Rotation.from_rotvec(error)).as_quat(scalar_first=True)
-    return replace(
-        pole, rotation=Rotations.from_quaternions(wxyz), covariance=pole.covariance * scale
-    )
+    return replace(pole, rotation=Rotations.from_quaternions(wxyz), covariance=pole.covariance * scale)
 
 
 @pytest.mark.parametrize(("dof", "exact"), [(np.inf, False), (np.inf, True), (8.0, True)])
@@ -306,6 +295,4 @@ def test_poles_keep_their_places() -> None:
     record = pole_of(1, np.inf)[0].as_record()
     vector = Rotation.from_rotvec(unit(60.0, -39.0) * np.deg2rad(30.0)).as_rotvec()
 
-    assert (record["pole_lat_deg"], record["pole_lon_deg"]) == pytest.approx(
-        lat_lon(vector), abs=1e-10
-    )
+    assert (record["pole_lat_deg"], record["pole_lon_deg"]) == pytest.approx(lat_lon(vector), abs=1e-10)

@@ -63,8 +63,7 @@ def omega(of: History, plate: str, relative_to: str) -> np.ndarray:
 def position(lat_deg: float, lon_deg: float) -> np.ndarray:
     """Geocentric position in metres of a geodetic place on GRS80 at height 0, by PROJ."""
     cart = pyproj.Transformer.from_pipeline(
-        "+proj=pipeline +step +proj=unitconvert +xy_in=deg +xy_out=rad"
-        " +step +proj=cart +ellps=GRS80"
+        "+proj=pipeline +step +proj=unitconvert +xy_in=deg +xy_out=rad +step +proj=cart +ellps=GRS80"
     )
     return np.array(cart.transform(lon_deg, lat_deg, 0.0))
 
@@ -113,9 +112,7 @@ def test_every_plate_that_proj_ships_is_compared(model: str) -> None:
     """
     text = (Path(pyproj.datadir.get_data_dir()) / model).read_text(encoding="utf-8")
     lines = [line for line in text.splitlines() if "+proj=helmert" in line]
-    shipped = {
-        line[1 : line.index(">")] for line in lines if " +drx" in line and " +s=" not in line
-    }
+    shipped = {line[1 : line.index(">")] for line in lines if " +drx" in line and " +s=" not in line}
     shipped = {name for name in shipped if not name.endswith("_T")}
     of = history(f"{model.lower()}.toml")
 
@@ -130,9 +127,7 @@ def test_poles_of_the_plate_motion_models(model: str, plate: str) -> None:
     the published components, not published.
     """
     row = next(
-        r
-        for r in records("itrf_plate_motion.csv")
-        if r["model"] == f"{model}-PMM" and r["plate"] == plate
+        r for r in records("itrf_plate_motion.csv") if r["model"] == f"{model}-PMM" and r["plate"] == plate
     )
     rows = history(f"{model.lower()}.toml").rows
     number = int(np.flatnonzero((rows.plate == plate) & (rows.age_ma == 1.0))[0])
@@ -141,12 +136,8 @@ def test_poles_of_the_plate_motion_models(model: str, plate: str) -> None:
     assert rows.pole_lat_deg[number] == pytest.approx(
         float(row["pole_lat_geocentric_deg_computed"]), abs=0.5001e-4
     )
-    assert rows.pole_lon_deg[number] == pytest.approx(
-        float(row["pole_lon_deg_computed"]), abs=0.5001e-4
-    )
-    assert -rows.angle_deg[number] == pytest.approx(
-        float(row["rate_deg_per_Myr_computed"]), abs=0.5001e-6
-    )
+    assert rows.pole_lon_deg[number] == pytest.approx(float(row["pole_lon_deg_computed"]), abs=0.5001e-4)
+    assert -rows.angle_deg[number] == pytest.approx(float(row["rate_deg_per_Myr_computed"]), abs=0.5001e-6)
 
 
 def nnr_morvel56(folder: Path) -> str:
@@ -206,9 +197,7 @@ def both_tables(folder: Path, hold_ma: float) -> Circuit:
     held = f"rates_hold_to_ma = {hold_ma}\n"
     morvel = (DATA / "morvel.toml").read_text(encoding="utf-8").split("[[table]]")[1]
     morvel = morvel.replace('"morvel_rel', f'"{DATA.as_posix()}/morvel_rel')
-    return Circuit(
-        History.read(write_manifest(folder, held + nnr_morvel56(folder), held + morvel)), "pa"
-    )
+    return Circuit(History.read(write_manifest(folder, held + nnr_morvel56(folder), held + morvel)), "pa")
 
 
 def apart_after(hold_ma: float) -> dict[str, float]:
@@ -217,9 +206,7 @@ def apart_after(hold_ma: float) -> dict[str, float]:
     apart = {}
     for row in MORVEL:
         plate = row["plate_moving"].lower()
-        chain = Rotation.from_rotvec(nnr["pa"] * hold_ma) * Rotation.from_rotvec(
-            -nnr[plate] * hold_ma
-        )
+        chain = Rotation.from_rotvec(nnr["pa"] * hold_ma) * Rotation.from_rotvec(-nnr[plate] * hold_ma)
         direct = Rotation.from_rotvec(-pole_of(row) * hold_ma)
         apart[plate] = (direct.inv() * chain).magnitude() * RADIUS_KM
     return apart
@@ -249,16 +236,12 @@ def test_motions_about_fixed_poles_do_not_close_for_long(tmp_path: Path) -> None
     """
     circuit = both_tables(tmp_path, 1.0)
     apart = apart_after(1.0)
-    found = {
-        conflict.plate: conflict.misfit_rad * RADIUS_KM for conflict in circuit.pieces.conflicts
-    }
+    found = {conflict.plate: conflict.misfit_rad * RADIUS_KM for conflict in circuit.pieces.conflicts}
 
     assert set(found) == {plate for plate, km in apart.items() if km > 1.0} == {"ri"}
     # 1e-6 km: both are sums of a few rounded doubles times the radius
     assert found["ri"] == pytest.approx(apart["ri"], abs=1e-6)
-    with pytest.raises(
-        TwoChainsError, match=r"ri relative to pa at 0.5 Ma: two chains from ri differ"
-    ):
+    with pytest.raises(TwoChainsError, match=r"ri relative to pa at 0.5 Ma: two chains from ri differ"):
         circuit.at("ri", 0.5)
 
 
@@ -272,9 +255,7 @@ def test_labels_are_case_sensitive(nnr: History) -> None:
 
     assert np.abs(omega(nnr, "nb", "nnr") - nubia).max() < 1e-15
     assert np.abs(omega(nnr, "NB", "nnr") - north_bismarck).max() < 1e-15
-    with pytest.raises(
-        UnknownPlateError, match=r"plate 'NA' is not in the history; did you mean 'na'"
-    ):
+    with pytest.raises(UnknownPlateError, match=r"plate 'NA' is not in the history; did you mean 'na'"):
         omega(nnr, "NA", "nnr")
 
 

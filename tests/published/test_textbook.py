@@ -40,8 +40,7 @@ def test_v3_through_a_history(tmp_path: Path) -> None:
     """The same motion from a table of rates (V3); with Nazca held still it points the other way."""
     path = tmp_path / "fowler.csv"
     path.write_text(
-        "plate,relative_to,pole_lat_deg,pole_lon_deg,rate_deg_per_myr\n"
-        "nazca,south-america,56,-94,0.76\n",
+        "plate,relative_to,pole_lat_deg,pole_lon_deg,rate_deg_per_myr\nnazca,south-america,56,-94,0.76\n",
         encoding="utf-8",
     )
     of = History.read(path)
@@ -126,9 +125,7 @@ def test_f_finite_rotations_do_not_commute(number: str, first: str, then: str, s
     Source: exact (F1, F2). Tolerance: rounding, 1e-12 deg.
     """
     later = Rotations.from_poles(*AXES[then], 90.0)
-    lat, lon, angle = (
-        float(v) for v in (later @ Rotations.from_poles(*AXES[first], 90.0)).as_poles()
-    )
+    lat, lon, angle = (float(v) for v in (later @ Rotations.from_poles(*AXES[first], 90.0)).as_poles())
 
     assert lat == pytest.approx(sign * math.degrees(math.atan(1.0 / math.sqrt(2.0))), abs=1e-12)
     assert (lon, angle) == (pytest.approx(45.0, abs=1e-12), pytest.approx(120.0, abs=1e-12))

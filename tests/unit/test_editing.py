@@ -153,7 +153,16 @@ def test_an_edited_history_is_written_and_read(before, tmp_path):
 def test_no_difference(before):
     """A history differs in nothing from itself, and none but the columns is given."""
     found = differences(before, before)
-    assert list(found) == ["plate", "relative_to", "age_ma", "what", "km", "first_row", "second_row"]
+    assert list(found) == [
+        "plate",
+        "relative_to",
+        "age_ma",
+        "what",
+        "km",
+        "moved_myr",
+        "first_row",
+        "second_row",
+    ]
     assert all(values == [] for values in found.values())
 
 
@@ -172,7 +181,7 @@ def test_every_kind_of_difference(before):
     assert records[0][4] == pytest.approx(0.25 * KM_PER_DEGREE, rel=1e-6)
     assert (records[1][4], records[3][4]) == (None, None)
     assert records[2][4] == pytest.approx(0.0, abs=1e-9)
-    assert [record[5:] for record in records] == [
+    assert [record[6:] for record in records] == [
         ("a.csv:12", "a.csv:12"),
         ("a.csv:22", ""),
         ("b.csv:7", "b.csv:7"),

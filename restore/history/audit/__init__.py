@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from restore.findings import Finding
-from restore.history.audit import chains, pairs, rows
+from restore.history.audit import chains, offpath, pairs, rows
 from restore.history.circuit import Circuit
 from restore.history.links import pairs_of
 from restore.history.store import History
@@ -11,6 +11,7 @@ from restore.history.store import History
 OF_ROWS = (rows.rows_without_reference, rows.rows_without_covariance, rows.mixed_clocks)
 OF_PAIRS = (
     pairs.slips,
+    offpath.rows_off_their_path,
     pairs.tables_in_radians,
     pairs.stages_too_fast_or_wide,
     pairs.antipodal_poles,
@@ -42,7 +43,7 @@ def audit(history: History, frame: str | None = None) -> list[Finding]:
     tracks = pairs.tracks_of(history, pairs_of(history))
     for of_pairs in OF_PAIRS:
         findings += of_pairs(history, tracks)
-    circuit = Circuit(history, frame or widest_frame(history))
+    circuit = Circuit(history, frame or widest_frame(history), mixed_clocks=True)
     for of_chains in OF_CHAINS:
         findings += of_chains(circuit)
     return sorted(findings, key=lambda finding: SEVERITIES.index(finding.severity))
