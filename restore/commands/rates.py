@@ -21,6 +21,7 @@ from restore.commands.options import (
 
 if TYPE_CHECKING:
     from restore.files.delimited import Layout
+    from restore.history.ledger import Ledger
 
 
 @click.command()
@@ -37,6 +38,9 @@ if TYPE_CHECKING:
 )  # fmt: skip
 @history_option(required=False)
 @click.option("--pole", type=Numbers("LAT", "LON", "DEG_PER_MYR"), help="Instead of a history.")
+@click.option(
+    "--ledger", "ledger_file", metavar="FILE", help="Write the evidence: .json or, in words, .txt."
+)
 @click.option("--out", metavar="FILE", help="Write here: .csv, .json, .geojson, .nc, .parquet, .gpkg.")
 @convention_options
 @radius_option
@@ -52,6 +56,7 @@ def rates(
     at_on: str,
     history_file: str | None,
     pole: tuple[float, float, float] | None,
+    ledger_file: str | None,
     out: str | None,
     beyond: str,
     radius_km: float,
@@ -72,6 +77,8 @@ def rates(
         raise click.UsageError("with --history give --plate and --relative-to")
     if average is not None and (pole is not None or not average[0] > average[1] >= 0.0):
         raise click.UsageError("--average OLDER,YOUNGER goes with --history, the older age first")
+    if ledger_file is not None and (pole is not None or not ledger_file.endswith((".json", ".txt"))):
+        raise click.UsageError("--ledger FILE.json or FILE.txt goes with --history")
     from restore.files.points import beside
     from restore.files.tables import TableOut
     from restore.geometry.latitudes import Latitudes
@@ -97,6 +104,8 @@ def rates(
             found = average_rates(*asked, *average, kind, radius_km, beyond)
         else:
             found = rates_at(*asked, age_ma, at_on, kind, radius_km, beyond)
+        if ledger_file is not None and found.ledger is not None:
+            _write_ledger(ledger_file, found.ledger)
     settings: dict[str, Any] = {
         "plate": plate,
         "relative_to": relative_to,
@@ -113,6 +122,20 @@ def rates(
     results = found.columns() | {name: [value] * count for name, value in said.items()}
     with TableOut(out, provenance(inputs, settings), ("then_lat_deg", "then_lon_deg")) as target:
         target.add(beside(own, results))
+
+
+def _write_ledger(file: str, ledger: Ledger) -> None:
+    """The chain behind the rates: at one age one entry, for a mean that of both ages."""
+    import json
+
+    from restore.files.atomic import whole_file
+
+    with whole_file(file) as part:
+        if file.endswith(".json"):
+            part.write_text(json.dumps(ledger.as_records(), indent=1) + "\n", encoding="utf-8")
+        else:
+            lines = [line for item in range(len(ledger)) for line in ledger.words(item)]
+            part.write_text("\n".join(lines) + "\n", encoding="utf-8")
 
 
 def _read_points(file: str, layout: Layout) -> tuple[dict[str, list[str]], list[float], list[float]]:

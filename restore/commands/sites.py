@@ -48,7 +48,9 @@ FRAME_KINDS = ("plate", "mantle", "spin-axis")
               " another are restated to it.")  # fmt: skip
 @click.option("--table-time-scale", metavar="SCALE", help="The clock of the ages in TABLE.")
 @click.option("--out", metavar="FILE", help="Write here: .csv, .json, .geojson, .nc, .parquet, .gpkg.")
-@click.option("--ledger", "ledger_file", metavar="FILE", help="Write the evidence: .csv or .json.")
+@click.option(
+    "--ledger", "ledger_file", metavar="FILE", help="Write the evidence: .csv, .json or, in words, .txt."
+)
 @click.option("--draws", type=click.IntRange(min=1), help="Monte Carlo answers besides the linear ones.")
 @click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Of the draws.")
 @click.option("--strict", is_flag=True, help="Exit 1 if any row is not restored.")

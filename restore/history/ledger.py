@@ -49,6 +49,7 @@ class Ledger:
     segments: tuple[Segment, ...]
     sensitivity: Sensitivity | None = None
     points: Floats | None = None
+    just_younger: bool = False
 
     @classmethod
     def of(
@@ -56,10 +57,11 @@ class Ledger:
         found: CircuitRotations,
         sensitivity: Sensitivity | None = None,
         points: Floats | None = None,
+        just_younger: bool = False,
     ) -> Ledger:
-        """The ledger of rotations from a Circuit."""
-        segment, segments = segments_of(found.circuit, found.chain, found.ages)
-        return cls(found.circuit, found.ages, segment, segments, sensitivity, points)
+        """The ledger of rotations from a Circuit; with `just_younger` that of rates, see `links.Stages.find`."""
+        segment, segments = segments_of(found.circuit, found.chain, found.ages, just_younger)
+        return cls(found.circuit, found.ages, segment, segments, sensitivity, points, just_younger)
 
     def __len__(self) -> int:
         return len(self.segment)
@@ -78,7 +80,8 @@ class Ledger:
         if self.segment[item] == NO_SEGMENT:
             return []
         chain = self.segments[int(self.segment[item])].chain
-        return list(links.steps_along(self.circuit.stages, chain, self.ages[item : item + 1]))
+        ages = self.ages[item : item + 1]
+        return list(links.steps_along(self.circuit.stages, chain, ages, self.just_younger))
 
     def links_of(self, item: int) -> list[dict[str, Any]]:
         """The links of one result, nearest the plate first: what acts, between which rows, how far.
@@ -244,7 +247,7 @@ def row_record(circuit: Circuit, number: int) -> dict[str, Any]:
 
 
 def segments_of(
-    circuit: Circuit, chain: NDArray[np.int32], ages: Floats
+    circuit: Circuit, chain: NDArray[np.int32], ages: Floats, just_younger: bool = False
 ) -> tuple[NDArray[np.int64], tuple[Segment, ...]]:
     """The segment (n,) of each chain and age (Ma), and the segments; numbered by chain, then by age."""
     segment = np.full(len(chain), NO_SEGMENT, dtype=np.int64)
@@ -252,7 +255,7 @@ def segments_of(
     for number in np.unique(chain[chain >= 0]):
         its_chain = circuit.pieces.chains[int(number)]
         items = np.flatnonzero(chain == number)
-        found = [circuit.stages.find(link.pair, ages[items]) for link in its_chain]
+        found = [circuit.stages.find(link.pair, ages[items], just_younger) for link in its_chain]
         code = np.zeros(len(items), dtype=np.int64)
         for stage in found:
             _, code = np.unique(code * (len(circuit.stages.half) + 1) + stage, return_inverse=True)

@@ -23,6 +23,7 @@ from restore.geometry.sphere import (
 )
 from restore.geometry.uncertain import Sensitivity
 from restore.history.circuit import REACHED, Circuit, CircuitRotations
+from restore.history.ledger import Ledger
 from restore.history.poles import stage_pole
 from restore.history.store import History
 from restore.history.velocity import Functional, angular_velocity, sensitivity
@@ -52,6 +53,7 @@ class Rates:
     omega: Floats
     sensitivity: Sensitivity | None = None
     found: CircuitRotations | None = None
+    ledger: Ledger | None = None
 
     @property
     def speed_mm_yr(self) -> Floats:
@@ -152,6 +154,7 @@ def rates(
         omega,
         jacobians,
         found,
+        _ledger(circuit, plate, age),
     )
 
 
@@ -203,7 +206,14 @@ def average_rates(
         np.rad2deg(angular_distance(omega, then)),
         covariance,
         omega,
+        ledger=stage.ledger,
     )
+
+
+def _ledger(circuit: Circuit, plate: str, ages: Floats) -> Ledger:
+    """The chain behind rates at each of the ages, once."""
+    found = circuit.rotations(plate, np.unique(ages))
+    return Ledger.of(found, found.sensitivity(), just_younger=True)
 
 
 def _functionals(

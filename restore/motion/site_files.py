@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import os
 from collections import Counter
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -23,6 +23,7 @@ from restore.motion.site_table import SiteReader
 from restore.motion.sites import SiteJob, SiteResults, restore_table
 
 CHUNK = 50_000
+LEDGER_ENDINGS = (".csv", ".json", ".txt")
 MOST_WRITTEN_OUT = 10_000
 POSITION = ("restored_lat_deg", "restored_lon_deg")
 
@@ -51,14 +52,14 @@ def restore_file(
 ) -> Done:
     """Restore a file of sites into `out` (standard output as CSV if None), in the order of its rows.
 
-    `ledger_file`: a `.csv` of the entries that the results share, or a `.json` that also writes out
-    every link of the first 10 000 results. Raises TableError or InputError if the file as a whole
+    `ledger_file`: a `.csv` of the entries that the results share, a `.json` that also writes out every link
+    of the first 10 000 results, or a `.txt` that tells those in words. Raises TableError or InputError if the file as a whole
     is at fault; then nothing is written.
     """
     if ledger_file is not None:
         _check_ledger(ledger_file, out, provenance)
     done, written_out = Done(), _WrittenOut()
-    in_full = ledger_file is not None and Path(ledger_file).suffix.lower() == ".json"
+    in_full = ledger_file is not None and Path(ledger_file).suffix.lower() in {".json", ".txt"}
     with DelimitedReader(table, layout) as reader:
         site_reader = SiteReader(reader, job.ages is None, job.clock)
         with TableOut(out, provenance, POSITION) as target:
@@ -87,8 +88,8 @@ def _check_ledger(
     file: str | os.PathLike[str], out: str | os.PathLike[str] | None, provenance: Mapping[str, Any]
 ) -> None:
     """Refuse at the start what could not be written at the end."""
-    if Path(file).suffix.lower() not in {".csv", ".json"}:
-        raise InputError(f"{os.fspath(file)}: a ledger is written as .csv or .json")
+    if Path(file).suffix.lower() not in LEDGER_ENDINGS:
+        raise InputError(f"{os.fspath(file)}: a ledger is written as {', '.join(LEDGER_ENDINGS)}")
     check_target(file)
     refuse_input(file, (record["file"] for record in provenance.get("inputs", ())))
     if out is not None and Path(file).absolute() == Path(out).absolute():
@@ -114,6 +115,7 @@ class _WrittenOut:
             record |= {"restored_age_ma": float(ledger.ages[item]), "ledger_id": ids[item]}
             if item < left:
                 record["links"] = ledger.links_of(item)
+                record["words"] = list(ledger.words(item))
             self.results.append(record)
         self.rows += len(results)
 
@@ -125,13 +127,29 @@ def write_ledger(
     results: Sequence[Mapping[str, Any]],
     provenance: Mapping[str, Any],
 ) -> None:
-    """Write the entries that results share, as `.csv` or, with the results themselves, as `.json`."""
+    """Write the entries that results share, as `.csv` or, with the results themselves, as `.json`; or the
+    results in words, as `.txt`.
+    """
     columns = entries(circuit, segments)
     with whole_file(file) as part:
+        if Path(file).suffix.lower() == ".txt":
+            part.write_text("".join(_in_words(results)), encoding="utf-8")
+            return
         if Path(file).suffix.lower() == ".csv":
             part.write_text(csv_text(columns), encoding="utf-8")
             return
         rows = zip(*columns.values(), strict=True)
         records = [dict(zip(columns, row, strict=True)) for row in rows]
-        content = {"provenance": provenance, "entries": records, "results": list(results)}
+        content = {"provenance": provenance, "entries": records, "results": _without_words(results)}
         part.write_text(json.dumps(content, indent=1, allow_nan=False) + "\n", encoding="utf-8")
+
+
+def _in_words(results: Sequence[Mapping[str, Any]]) -> Iterator[str]:
+    for result in results:
+        name = result.get("site", f"row {result['row']}")
+        yield f"{name}, {result['restored_age_ma']:g} Ma, ledger {result['ledger_id']}\n"
+        yield from (f"  {line}\n" for line in result.get("words", ()))
+
+
+def _without_words(results: Sequence[Mapping[str, Any]]) -> list[dict[str, Any]]:
+    return [{key: value for key, value in result.items() if key != "words"} for result in results]

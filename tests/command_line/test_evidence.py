@@ -170,7 +170,7 @@ def test_only_the_first_results_are_written_out(here, ask, monkeypatch):
 @pytest.mark.parametrize(
     ("name", "message"),
     [
-        ("ledger.txt", "ledger.txt: a ledger is written as .csv or .json"),
+        ("ledger.pdf", "ledger.pdf: a ledger is written as .csv, .json, .txt"),
         ("no/ledger.csv", "no/ledger.csv: cannot be written: there is no folder 'no'"),
         ("sites.csv", "sites.csv: is a file that was read; give another name to write to"),
         ("out.csv", "out.csv: the ledger and the sites cannot be one file"),

@@ -90,3 +90,19 @@ def test_a_mean_over_one_stage_is_the_rate_in_it():
     assert mean.azimuth_deg[0] == pytest.approx(now.azimuth_deg[0], abs=1e-9)
     # 0.707 mm/yr for rows of 5 km ten Myr apart (computed by a separate small program, not published)
     assert mean.sigmas()[0][0] == pytest.approx(0.7071, abs=5e-5)
+
+
+@pytest.mark.parametrize(("sigma_km", "apart"), [(20.0, False), (4000.0, True)])
+def test_where_draws_and_the_linear_form_part(sigma_km, apart):
+    """At 20 km the radius that holds 95 % of the draws is the linear ellipse's; at 4000 km the sphere
+    bends and the two differ by more than a tenth of it."""
+    sigma = np.eye(3) * (sigma_km / 6371.0088) ** 2
+    history = History.from_rows(
+        [Row("A", "B", 0.0, 0, 0, 0.0), Row("A", "B", 40.0, 60.0, 20.0, 30.0, sigma)]
+    )
+    site = {"lat_deg": [10.0], "lon_deg": [20.0], "age_ma": [40.0], "plate": ["A"]}
+    found = restore_sites(site, history, "B", draws=4000).columns
+    linear, drawn = float(found["ellipse_major_km"][0]), float(found["draws_radius_95_km"][0])
+    # isotropic: both axes 2.4477 sigma; 4000 draws give the quantile to about 2 %
+    assert linear == pytest.approx(2.4477 * sigma_km, rel=1e-4)
+    assert (abs(drawn / linear - 1.0) > 0.1) is apart
