@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import json
 import os
 from collections.abc import Mapping
@@ -15,13 +16,9 @@ from restore.files.atomic import whole_file
 from restore.geometry.sphere import (
     EARTH_RADIUS_KM,
     Floats,
-    cross,
-    dot,
-    lat_lon,
-    tangent_frame,
     unit_vectors,
 )
-from restore.history.circuit import Circuit
+from restore.history.circuit import REACHED, Circuit
 from restore.history.velocity import angular_velocity
 from restore.outlines import Outlines
 
@@ -37,6 +34,18 @@ class VelocityGrid:
     lat_deg: Floats
     lon_deg: Floats
     codes: np.ndarray
+
+    @functools.cached_property
+    def members(self) -> dict[int, tuple[np.ndarray, Floats]]:
+        """Of each plate its cells, by flat number, and their unit vectors (3, cells)."""
+        lats, lons = (a.ravel() for a in np.meshgrid(self.lat_deg, self.lon_deg, indexing="ij"))
+        xyz = unit_vectors(lats, lons)
+        flat = self.codes.ravel()
+        cells = {code: np.flatnonzero(flat == code) for code in np.unique(flat[flat >= 0]).tolist()}
+        return {code: (own, np.ascontiguousarray(xyz[own].T)) for code, own in cells.items()}
+
+
+FIELDS = ("east_mm_yr", "north_mm_yr", "then_lat_deg", "then_lon_deg")
 
 
 def grid_on_plates(circuit: Circuit, outlines: Outlines, step_deg: float) -> VelocityGrid:
@@ -61,22 +70,31 @@ def velocities_at(
 ) -> dict[str, Floats]:
     """East and north velocity (mm/yr, in the frame, forward in time) of the material of each cell at an
     age (Ma), and where it then was (degrees); (n, m), NaN where there is no plate or no chain.
+
+    With v = omega x r at a unit vector (x, y, z), east is `(x vy - y vx) / h` and north `vz h - z (x vx +
+    y vy) / h`, h = hypot(x, y); at a pole the longitude counts as 0.
     """
-    codes = grid.codes.ravel()
-    lats, lons = (a.ravel() for a in np.meshgrid(grid.lat_deg, grid.lon_deg, indexing="ij"))
-    unique, plate = np.unique(codes, return_inverse=True)
-    found = circuit.rotations_by_code(unique, np.full(len(unique), age_ma))
-    omega = found.rotations.apply(angular_velocity(found))
-    then = found.rotations[plate].apply(unit_vectors(lats, lons))
-    moving = cross(omega[plate], then) * radius_km
-    east, north = tangent_frame(then)
-    then_lat, then_lon = lat_lon(then)
-    parts = {
-        "east_mm_yr": dot(moving, east),
-        "north_mm_yr": dot(moving, north),
-        "then_lat_deg": then_lat,
-        "then_lon_deg": then_lon,
-    }
+    parts = {name: np.full(grid.codes.size, np.nan) for name in FIELDS}
+    members = grid.members
+    codes = np.array(sorted(members), dtype=np.int64)
+    found = circuit.rotations_by_code(codes, np.full(len(codes), age_ma))
+    omegas = found.rotations.apply(angular_velocity(found)) * radius_km
+    for number, code in enumerate(codes.tolist()):
+        if found.status[number] != REACHED:
+            continue
+        cells, start = members[code]
+        x, y, z = found.rotations[number].as_matrices() @ start
+        wx, wy, wz = omegas[number]
+        vx, vy, vz = wy * z - wz * y, wz * x - wx * z, wx * y - wy * x
+        level = np.sqrt(x * x + y * y)
+        at_pole = level == 0.0
+        safe = np.where(at_pole, 1.0, level)
+        cos_lon, sin_lon = np.where(at_pole, 1.0, x / safe), y / safe
+        parts["east_mm_yr"][cells] = cos_lon * vy - sin_lon * vx
+        parts["north_mm_yr"][cells] = vz * level - z * (cos_lon * vx + sin_lon * vy)
+        parts["then_lat_deg"][cells] = np.rad2deg(np.arctan2(z, level))
+        lon = np.rad2deg(np.arctan2(y, x))
+        parts["then_lon_deg"][cells] = np.where(lon >= 180.0, -180.0, lon)
     return {name: values.reshape(grid.codes.shape) for name, values in parts.items()}
 
 

@@ -92,17 +92,18 @@ def test_a_mean_over_one_stage_is_the_rate_in_it():
     assert mean.sigmas()[0][0] == pytest.approx(0.7071, abs=5e-5)
 
 
-@pytest.mark.parametrize(("sigma_km", "apart"), [(20.0, False), (4000.0, True)])
-def test_where_draws_and_the_linear_form_part(sigma_km, apart):
-    """At 20 km the radius that holds 95 % of the draws is the linear ellipse's; at 4000 km the sphere
-    bends and the two differ by more than a tenth of it."""
-    sigma = np.eye(3) * (sigma_km / 6371.0088) ** 2
-    history = History.from_rows(
-        [Row("A", "B", 0.0, 0, 0, 0.0), Row("A", "B", 40.0, 60.0, 20.0, 30.0, sigma)]
-    )
-    site = {"lat_deg": [10.0], "lon_deg": [20.0], "age_ma": [40.0], "plate": ["A"]}
-    found = restore_sites(site, history, "B", draws=4000).columns
+@pytest.mark.parametrize(("sigma_deg", "apart"), [(1.0, False), (80.0, True)])
+def test_where_draws_and_the_linear_form_part(sigma_deg, apart):
+    """An angle that is not known well moves a site near the pole along a small circle: by a degree the
+    linear form is right, by 80 degrees the circle closes on itself and only the draws know."""
+    axis = np.array([0.0, 0.0, 1.0])
+    sigma = np.deg2rad(sigma_deg)
+    covariance = np.outer(axis, axis) * sigma**2 + np.eye(3) * (1e-4 * sigma) ** 2
+    rows = [Row("A", "B", 0.0, 0, 0, 0.0), Row("A", "B", 40.0, 90.0, 0.0, 30.0, covariance)]
+    site = {"lat_deg": [80.0], "lon_deg": [20.0], "age_ma": [40.0], "plate": ["A"]}
+    found = restore_sites(site, History.from_rows(rows), "B", draws=4000).columns
     linear, drawn = float(found["ellipse_major_km"][0]), float(found["draws_radius_95_km"][0])
-    # isotropic: both axes 2.4477 sigma; 4000 draws give the quantile to about 2 %
-    assert linear == pytest.approx(2.4477 * sigma_km, rel=1e-4)
-    assert (abs(drawn / linear - 1.0) > 0.1) is apart
+    along = sigma * np.cos(np.deg2rad(80.0)) * 6371.0088
+    assert linear == pytest.approx(2.4477 * along, rel=1e-4)
+    # on a line 95 % lie within 1.96 sigma; 4000 draws give that to about 2 %
+    assert bool(abs(drawn / (1.96 * along) - 1.0) > 0.1) is apart
