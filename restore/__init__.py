@@ -26,12 +26,13 @@ _HOMES = {
     "TwoChainsError": "restore.errors",
     "UnknownPlateError": "restore.errors",
     "finite_pole": "restore.history.poles",
-    "flowlines": "restore.motion.flowlines",
+    "flowlines": "restore.motion.spreading",
     "rates": "restore.motion.rates",
     "restore_lines": "restore.motion.lines",
     "restore_sites": "restore.motion.sites",
     "run_scenario": "restore.scenario.run",
     "stage_pole": "restore.history.poles",
+    "trails": "restore.motion.spreading",
 }
 
 __all__ = sorted(_HOMES)  # noqa: PLE0605
@@ -55,10 +56,10 @@ if TYPE_CHECKING:
     from restore.history.poles import finite_pole, stage_pole
     from restore.history.rows import Row
     from restore.history.store import History
-    from restore.motion.flowlines import flowlines
     from restore.motion.lines import restore_lines
     from restore.motion.rates import rates
     from restore.motion.sites import restore_sites
+    from restore.motion.spreading import flowlines, trails
     from restore.scenario.run import run_scenario
 
 

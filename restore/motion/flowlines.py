@@ -157,7 +157,7 @@ class Flowlines:
         }
         columns |= {name: axis.ravel()[keep] for name, axis in zip(ELLIPSE, self.axes, strict=True)}
         known = ~np.isnan(columns[ELLIPSE[0]])
-        columns["errors"] = np.where(known, "rows only", "").tolist()
+        columns["errors"] = np.where(known, "rows only", "not known").tolist()
         columns["status"] = [STATUSES[code] for code in self.status.ravel()[keep].tolist()]
         columns["formed_on"] = formed.tolist()
         taken = dict.fromkeys(columns)

@@ -32,6 +32,7 @@ NAMES = [
     "restore_sites",
     "run_scenario",
     "stage_pole",
+    "trails",
 ]
 
 TREE = {
