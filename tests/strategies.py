@@ -35,7 +35,7 @@ MOST_RAD_PER_STAGE = 1.0
 HALF_TURN = math.pi
 
 
-def within(measured: object, bar: float, what: str = "") -> None:
+def assert_within(measured: object, bar: float, what: str = "") -> None:
     """Assert that every measured value is at most `bar` in size; NaN is not."""
     worst = float(np.max(np.abs(np.asarray(measured, dtype=np.float64)), initial=0.0))
     assert worst <= bar, f"{what} measured {worst:.3g}, bar {bar:.3g}".strip()

@@ -51,7 +51,7 @@ def flowlines(
         starts = RidgePoints.read(points, between)
     else:
         known = {name: points[name] for name in ("start", "age_ma", "on_plate") if name in points}
-        starts = RidgePoints.of(_needed(points, "lat_deg"), _needed(points, "lon_deg"), between, **known)  # type: ignore[arg-type]
+        starts = RidgePoints.of(_needed(points, "lat_deg"), _needed(points, "lon_deg"), between, **known)
     return FlowlineMaker(spreading, starts).make(starts, None)
 
 

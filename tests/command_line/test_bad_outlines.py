@@ -124,7 +124,7 @@ def world(here):
     return here
 
 
-def is_refused(ask, here, message):
+def assert_refused(ask, here, message):
     """One line that holds the message, exit 1, no output of any kind."""
     options = ("--history", "history.csv", "--frame", "deep", "--outlines", "o.geojson", "--out", "out.csv")
     answer = ask("sites", "sites.csv", *options, "--ledger", "ledger.csv")
@@ -142,14 +142,14 @@ def is_refused(ask, here, message):
 def test_features_at_fault(world, ask, bad, message):
     """The feature is named by its number; the sound one before it does not hide it."""
     (world / "o.geojson").write_text(json.dumps(second(bad)), encoding="utf-8")
-    is_refused(ask, world, f"o.geojson: feature 2: {message}")
+    assert_refused(ask, world, f"o.geojson: feature 2: {message}")
 
 
 @pytest.mark.parametrize(("content", "message"), WHOLE.values(), ids=WHOLE)
 def test_files_at_fault(world, ask, content, message):
     """What is no GeoJSON at all, or holds nothing."""
     (world / "o.geojson").write_bytes(content)
-    is_refused(ask, world, message)
+    assert_refused(ask, world, message)
 
 
 @pytest.mark.parametrize(("bad", "message"), IN_A_FEATURE.values(), ids=IN_A_FEATURE)
@@ -165,13 +165,13 @@ def test_check_says_the_same(world, ask, bad, message):
 
 def test_files_that_cannot_be_opened(world, ask, monkeypatch):
     """No such file, a folder, one that may not be read, an ending that nobody knows."""
-    is_refused(ask, world, "o.geojson: no such file")
+    assert_refused(ask, world, "o.geojson: no such file")
     (world / "o.geojson").mkdir()
-    is_refused(ask, world, "o.geojson: is a folder")
+    assert_refused(ask, world, "o.geojson: is a folder")
     (world / "o.geojson").rmdir()
     (world / "o.geojson").write_text(json.dumps(feature()), encoding="utf-8")
     deny(world / "o.geojson", monkeypatch)
-    is_refused(ask, world, "o.geojson: ")
+    assert_refused(ask, world, "o.geojson: ")
 
 
 def test_an_unknown_ending(world, ask):

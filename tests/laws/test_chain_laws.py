@@ -14,6 +14,7 @@ from strategies import (
     R_M,
     Case,
     Leg,
+    assert_within,
     cases,
     chain_cases,
     dated_cases,
@@ -26,7 +27,6 @@ from strategies import (
     turned_round,
     unit_vectors,
     vector_of,
-    within,
 )
 
 from restore.geometry import so3
@@ -53,7 +53,7 @@ def test_a_chain_is_composed_as_its_rows_say(dated):
     """Chains of 1 to 6 links, pairs in both directions and partner changes agree with scipy."""
     case, age = dated
     found = quaternion(Circuit(case.history(), case.frame), case.plate, age)
-    within(quaternions_apart(found, expected(case, age)), 1e-12)
+    assert_within(quaternions_apart(found, expected(case, age)), 1e-12)
 
 
 @given(dated_cases())
@@ -63,7 +63,7 @@ def test_the_chain_the_other_way_is_the_inverse(dated):
     history = case.history()
     there = quaternion(Circuit(history, case.frame), case.plate, age)
     back = quaternion(Circuit(history, case.plate), case.frame, age)
-    within(quaternions_apart(so3.multiply(back, there), [1.0, 0.0, 0.0, 0.0]), CHAIN_RAD)
+    assert_within(quaternions_apart(so3.multiply(back, there), [1.0, 0.0, 0.0, 0.0]), CHAIN_RAD)
 
 
 @given(chain_cases(least_links=2), st.data())
@@ -76,7 +76,7 @@ def test_the_choice_of_frame_does_not_matter_between_two_plates(case, data):
     one, other = quaternion(circuit, case.plate, age), quaternion(circuit, case.frame, age)
     composed = so3.multiply(so3.conjugate(other), one)
     direct = quaternion(Circuit(history, case.frame), case.plate, age)
-    within(quaternions_apart(composed, direct), CHAIN_RAD)
+    assert_within(quaternions_apart(composed, direct), CHAIN_RAD)
 
 
 @given(cases(), st.data())
@@ -87,7 +87,7 @@ def test_a_pair_listed_the_other_way_round_says_the_same(case, data):
     turned = data.draw(st.sets(st.sampled_from(pairs)))
     rows = [turned_round(r) if (r.plate, r.relative_to) in turned else r for r in case.rows]
     found = quaternion(Circuit(replace(case, rows=tuple(rows)).history(), case.frame), case.plate, age)
-    within(quaternions_apart(found, expected(case, age)), 1e-12)
+    assert_within(quaternions_apart(found, expected(case, age)), 1e-12)
 
 
 @given(dated_cases())
@@ -105,7 +105,7 @@ def test_a_rotation_of_the_same_sense_in_other_numbers_says_the_same(dated):
         longer = replace(row, angle_deg=row.angle_deg - 360.0)
         rows.append([row, antipode, longer][i % 3] if row.angle_deg else row)
     found = quaternion(Circuit(replace(case, rows=tuple(rows)).history(), case.frame), case.plate, age)
-    within(quaternions_apart(found, expected(case, age)), 1e-12)
+    assert_within(quaternions_apart(found, expected(case, age)), 1e-12)
 
 
 @given(cases())
@@ -113,7 +113,7 @@ def test_at_a_rows_age_the_row_itself_is_given(case):
     """At 0 Ma nothing moves; at each row's age the pair's rotation is the row's own."""
     history = case.history()
     today = quaternion(Circuit(history, case.frame), case.plate, 0.0)
-    within(quaternions_apart(today, [1.0, 0.0, 0.0, 0.0]), 0.0)
+    assert_within(quaternions_apart(today, [1.0, 0.0, 0.0, 0.0]), 0.0)
     for row in case.rows:
         alone = History.from_rows(
             [r for r in case.rows if (r.plate, r.relative_to) == (row.plate, row.relative_to)],
@@ -122,7 +122,7 @@ def test_at_a_rows_age_the_row_itself_is_given(case):
         found = quaternion(Circuit(alone, row.relative_to), row.plate, row.age_ma)
         pole = vector_of(row.pole_lat_deg, row.pole_lon_deg)
         printed = Rotation.from_rotvec(math.radians(row.angle_deg) * pole)
-        within(quaternions_apart(found, printed.as_quat(scalar_first=True)), 2e-15)
+        assert_within(quaternions_apart(found, printed.as_quat(scalar_first=True)), 2e-15)
 
 
 @given(cases(), unit_vectors())
@@ -138,7 +138,7 @@ def test_one_ulp_either_side_of_a_row_nothing_jumps(case, x):
         near = [t for t in near if 0.0 <= t <= case.oldest_ma]
         moved = [so3.rotate(quaternion(circuit, case.plate, t), x) for t in near]
         for one, other in itertools.pairwise(moved):
-            within(metres_apart(one, other), 1e-7)
+            assert_within(metres_apart(one, other), 1e-7)
 
 
 @given(dated_cases(), unit_vectors())
@@ -155,8 +155,8 @@ def test_two_ages_close_together_differ_by_speed_times_time(dated, x):
     older_turn, younger_turn = (quaternion(circuit, case.plate, t) for t in (age, younger))
     step = so3.rotate(younger_turn, x) - so3.rotate(older_turn, x)
     speed = so3.rotate(older_turn, np.cross(angular_velocity(found)[0], x))
-    within((step - speed * (age - younger)) * R_M, 1e-6)
-    within(np.linalg.norm(speed), 6 * FASTEST_RAD_PER_MYR * 1.001)
+    assert_within((step - speed * (age - younger)) * R_M, 1e-6)
+    assert_within(np.linalg.norm(speed), 6 * FASTEST_RAD_PER_MYR * 1.001)
 
 
 @given(cases())
@@ -192,7 +192,7 @@ def test_hold_and_extend_past_the_oldest_age(case, past):
     for plate, relative_to, forward in case.path(oldest):
         link = extended_link(case, plate, relative_to, oldest + past)
         total = (link if forward else link.inv()) * total
-    within(quaternions_apart(extended, total.as_quat(scalar_first=True)), 1e-12)
+    assert_within(quaternions_apart(extended, total.as_quat(scalar_first=True)), 1e-12)
 
 
 def extended_link(case: Case, plate: str, relative_to: str, age_ma: float) -> Rotation:
@@ -264,7 +264,7 @@ def test_ten_links_there_and_back(kind):
     back = move_own(back_circuit, past, ages)
     home = np.array([vector_of(*p) for p in zip(back.lat_deg, back.lon_deg, strict=True)])
     begun = np.array([vector_of(*p) for p in zip(lat, lon, strict=True)])
-    within(metres_apart(home, begun), 1e-6)
+    assert_within(metres_apart(home, begun), 1e-6)
 
 
 def test_ten_links_against_scipy():
@@ -277,7 +277,7 @@ def test_ten_links_against_scipy():
     ages = np.concatenate([np.random.default_rng(23).uniform(0.0, 180.0, 160), case.row_ages()])
     found = circuit.rotations("p0", ages).rotations.quaternions
     truth = np.array([expected(case, age) for age in ages])
-    within(quaternions_apart(found, truth), 1e-12)
+    assert_within(quaternions_apart(found, truth), 1e-12)
 
 
 def test_half_turns_in_a_history():
@@ -293,7 +293,7 @@ def test_half_turns_in_a_history():
         moved = circuit.rotations("p", ages).rotations.apply([1.0, 0.0, 0.0])
         turned = np.radians(4.5 * ages)
         truth = np.stack([np.cos(turned), np.sin(turned), np.zeros_like(turned)], axis=-1)
-        within(metres_apart(moved, truth), 1e-7)
+        assert_within(metres_apart(moved, truth), 1e-7)
 
 
 def test_a_stage_of_exactly_half_a_turn_is_one_of_the_two_arcs():
@@ -303,7 +303,7 @@ def test_a_stage_of_exactly_half_a_turn_is_one_of_the_two_arcs():
     middle = circuit.at("p", 10.0).rotations.apply([1.0, 0.0, 0.0]).reshape(3)
     assert min(metres_apart(middle, [0, s, 0]) for s in (1.0, -1.0)) < 1e-8
     end = circuit.at("p", 20.0).rotations.apply([1.0, 0.0, 0.0]).reshape(3)
-    within(metres_apart(end, [-1.0, 0.0, 0.0]), 1e-8)
+    assert_within(metres_apart(end, [-1.0, 0.0, 0.0]), 1e-8)
 
 
 def test_random_rows_at_equal_ages_in_different_pairs():
@@ -325,4 +325,4 @@ def test_random_rows_at_equal_ages_in_different_pairs():
     for i in range(4):
         a, b, c = (Rotation.from_quat(turns[4 * p + i], scalar_first=True) for p in range(3))
         truth = (c * b * a).as_quat(scalar_first=True)
-        within(quaternions_apart(quaternion(circuit, "p0", 10.0 * (i + 1)), truth), 1e-12)
+        assert_within(quaternions_apart(quaternion(circuit, "p0", 10.0 * (i + 1)), truth), 1e-12)

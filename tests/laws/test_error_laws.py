@@ -10,6 +10,7 @@ from scipy.spatial.transform import Rotation
 from strategies import (
     R_M,
     Case,
+    assert_within,
     cases,
     chain_cases,
     dated_cases,
@@ -19,7 +20,6 @@ from strategies import (
     times_in,
     turned_round,
     vector_of,
-    within,
 )
 
 from restore.geometry import so3
@@ -65,7 +65,7 @@ def test_the_sensitivity_is_the_derivative_by_every_row(dated):
     sensitivity = circuit.at(case.plate, age).sensitivity()
     for number in range(len(case.rows)):
         misfit = jacobian_of(sensitivity, number) - numerical_jacobian(case, age, number)
-        within(misfit, JACOBIAN, f"row {number}")
+        assert_within(misfit, JACOBIAN, f"row {number}")
 
 
 @settings(max_examples=20)
@@ -80,7 +80,7 @@ def test_the_covariance_is_the_sum_over_rows(dated):
             jacobian = numerical_jacobian(case, age, number)
             total += jacobian @ row.covariance @ jacobian.T
     scale = sum(np.trace(r.covariance) for r in case.rows if r.age_ma > 0.0)
-    within(found.covariance()[0] - total, 1e-7 * scale)
+    assert_within(found.covariance()[0] - total, 1e-7 * scale)
 
 
 @given(dated_cases(errors=True))
@@ -97,7 +97,7 @@ def test_covariances_are_symmetric_and_not_negative(dated):
     assert not np.any(circuit.at(case.plate, 0.0).covariance())
     # at 5e-324 Ma the variance is below the smallest float
     if np.trace(covariance) > 1e-290:
-        within(sensitivity.variance_shares(errors).sum() - 1.0, 1e-12)
+        assert_within(sensitivity.variance_shares(errors).sum() - 1.0, 1e-12)
 
 
 @given(chain_cases(errors=True, least_links=2), st.data())
@@ -116,9 +116,9 @@ def test_bracketing_leaves_the_covariance_alone(case, data):
     detour = Sensitivity.combined([a.sensitivity(), c.sensitivity().mapped(back)])
     direct = Circuit(history, case.frame).at(case.plate, age).sensitivity()
     size = max(np.trace(direct.covariance(errors)[0]), 1e-20)
-    within(detour.covariance(errors) - direct.covariance(errors), 1e-11 * size)
+    assert_within(detour.covariance(errors) - direct.covariance(errors), 1e-11 * size)
     for number in range(len(case.rows)):
-        within(jacobian_of(detour, number) - jacobian_of(direct, number), 1e-13)
+        assert_within(jacobian_of(detour, number) - jacobian_of(direct, number), 1e-13)
 
 
 @given(dated_cases(errors=True))
@@ -130,7 +130,7 @@ def test_the_inverse_has_the_covariance_of_the_other_side(dated):
     back = Circuit(history, case.plate).at(case.frame, age)
     matrix = case.rotation(age).as_matrix()
     turned = matrix @ there.covariance()[0] @ matrix.T
-    within(back.covariance()[0] - turned, 1e-12 * max(np.trace(turned), 1e-20))
+    assert_within(back.covariance()[0] - turned, 1e-12 * max(np.trace(turned), 1e-20))
 
 
 def spread_of(case: Case, lat: float, lon: float, age: float, common: bool = False) -> Spread:
@@ -145,7 +145,7 @@ def spread_of(case: Case, lat: float, lon: float, age: float, common: bool = Fal
 
 @given(cases(errors=True), latitudes(), longitudes(), st.data())
 def test_a_pair_listed_the_other_way_round_gives_the_same_ellipses(case, lat, lon, data):
-    """Rotation inverted and covariance A C A^T: the 95 % ellipse stays, within a millimetre.
+    """Rotation inverted and covariance A C A^T: the 95 % ellipse stays, assert_within a millimetre.
 
     The azimuth is measured as what it moves the end of the longer axis.
     """
@@ -155,10 +155,10 @@ def test_a_pair_listed_the_other_way_round_gives_the_same_ellipses(case, lat, lo
     rows = [turned_round(r) if (r.plate, r.relative_to) in turned else r for r in case.rows]
     one, _ = spread_of(case, lat, lon, age).ellipse(R_M)
     other, _ = spread_of(replace(case, rows=tuple(rows)), lat, lon, age).ellipse(R_M)
-    within(one.major_km - other.major_km, 1e-3)
-    within(one.minor_km - other.minor_km, 1e-3)
+    assert_within(one.major_km - other.major_km, 1e-3)
+    assert_within(one.minor_km - other.minor_km, 1e-3)
     off = math.remainder(float(one.azimuth_deg[0] - other.azimuth_deg[0]), 180.0)
-    within(math.radians(off) * (one.major_km - one.minor_km), 1e-3)
+    assert_within(math.radians(off) * (one.major_km - one.minor_km), 1e-3)
 
 
 @settings(max_examples=20)
@@ -189,10 +189,10 @@ def test_the_spread_of_a_point_is_the_derivative_of_its_place(case, lat, lon, da
         spread = spread_of(case, lat, lon, age, common)
         found = [float(v.ravel()[0]) for v in (spread.east, spread.north, spread.cov)]
         # near a pole east is ill defined; the sum of the variances and the determinant are not
-        within(found[0] + found[1] - np.trace(total), 1e-7 * scale)
+        assert_within(found[0] + found[1] - np.trace(total), 1e-7 * scale)
         if abs(there[2]) < 0.99999:
             truth = [total[0, 0], total[1, 1], total[0, 1]]
-            within(np.array(found) - truth, 1e-7 * scale)
+            assert_within(np.array(found) - truth, 1e-7 * scale)
 
 
 def tangent_at(x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -224,14 +224,16 @@ def test_the_age_sigma_of_a_site_spreads_it_along_its_motion(case, lat, lon, par
     before, after = (case.rotation(t).apply(start) for t in (age - 1e-4, age + 1e-4))
     step = (after - before) / 2e-4 * sigma
     assert found is not None
-    within((math.sqrt(float(found.east[0] + found.north[0])) - np.linalg.norm(step)) * R_M, 0.1)
+    assert_within((math.sqrt(float(found.east[0] + found.north[0])) - np.linalg.norm(step)) * R_M, 0.1)
     determinant = float(found.east[0] * found.north[0] - found.cov[0] ** 2)
-    within(determinant, 1e-13 * float(found.east[0] + found.north[0]) ** 2)
+    assert_within(determinant, 1e-13 * float(found.east[0] + found.north[0]) ** 2)
     there = case.rotation(age).apply(start)
     # near a pole east is ill defined
     if abs(there[2]) < 0.99999:
         east, north = (float(step @ axis) for axis in tangent_at(there))
-        within((float(found.cov[0]) - east * north) * R_M**2, 0.1 * R_M * np.linalg.norm(step) + 1e-6)
+        assert_within(
+            (float(found.cov[0]) - east * north) * R_M**2, 0.1 * R_M * np.linalg.norm(step) + 1e-6
+        )
 
 
 def three_row_history() -> History:
@@ -261,7 +263,7 @@ def test_at_the_exact_age_of_the_oldest_row_only_that_row_has_a_say():
     history = three_row_history()
     circuit = Circuit(history, "B")
     found = circuit.at("A", 59.0)
-    within(found.covariance()[0] - history.rows.covariance[2], 1e-20)
+    assert_within(found.covariance()[0] - history.rows.covariance[2], 1e-20)
     assert np.flatnonzero(found.sensitivity().rows[0] == 1).size == 0
     points = Points(np.array([10.0]), np.array([20.0]), circuit.codes(["A"]))
     for move in (move_own, move_common):
@@ -298,7 +300,7 @@ def test_shared_rows_cancel_between_two_results(dated, data):
     difference = Sensitivity.combined([one, other.mapped(minus)]).covariance(errors)[0]
     crossed = one.cross_covariance(other, errors)[0]
     total = one.covariance(errors)[0] + other.covariance(errors)[0] - crossed - crossed.T
-    within(difference - total, 1e-12 * max(np.trace(total), np.trace(one.covariance(errors)[0])))
+    assert_within(difference - total, 1e-12 * max(np.trace(total), np.trace(one.covariance(errors)[0])))
     same = Sensitivity.combined([one, one.mapped(minus)])
     assert not same.covariance(errors).any()
 
@@ -313,7 +315,7 @@ def test_pulling_back_through_a_stage_is_the_transpose_of_its_matrix():
         weights = so3.stage_weights(fraction, 0.5 * size)
         pulled = so3.pull_back_stage(covector, vector / size, weights)
         matrix = numerical_stage_jacobian(vector, fraction)
-        within(pulled - matrix.T @ covector, 1e-8)
+        assert_within(pulled - matrix.T @ covector, 1e-8)
 
 
 def numerical_stage_jacobian(vector: np.ndarray, fraction: float) -> np.ndarray:

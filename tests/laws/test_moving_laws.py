@@ -9,6 +9,7 @@ from hypothesis import strategies as st
 from scipy.spatial.transform import Rotation
 from strategies import (
     R_M,
+    assert_within,
     cases,
     latitudes,
     longitudes,
@@ -16,7 +17,6 @@ from strategies import (
     row_of,
     times_in,
     vector_of,
-    within,
 )
 
 from restore.geometry.latitudes import Latitudes
@@ -148,7 +148,7 @@ def test_common_ages_leave_no_trace_of_order_or_chunks(errors):
 
 
 def test_own_ages_and_common_ages_agree():
-    """A site at an age is in the same place by either way, within 1e-6 m, its ellipse within 1 mm.
+    """A site at an age is in the same place by either way, assert_within 1e-6 m, its ellipse within 1 mm.
 
     Measured: 6e-9 m, ellipses 3e-11 m.
     """
@@ -166,10 +166,10 @@ def test_own_ages_and_common_ages_agree():
         assert good.sum() > 400 or age > 120.0
         one = places(own.lat_deg[good], own.lon_deg[good])
         other = places(common.lat_deg[good, k], common.lon_deg[good, k])
-        within(metres_apart(one, other), 1e-6)
+        assert_within(metres_apart(one, other), 1e-6)
         one_ellipse, other_ellipse = (m.spread.ellipse(R_M)[0] for m in (own, common))
-        within(one_ellipse.major_km[good] - other_ellipse.major_km[good, k], 1e-3)
-        within(one_ellipse.minor_km[good] - other_ellipse.minor_km[good, k], 1e-3)
+        assert_within(one_ellipse.major_km[good] - other_ellipse.major_km[good, k], 1e-3)
+        assert_within(one_ellipse.minor_km[good] - other_ellipse.minor_km[good, k], 1e-3)
 
 
 def places(lat: np.ndarray, lon: np.ndarray) -> np.ndarray:
@@ -179,15 +179,15 @@ def places(lat: np.ndarray, lon: np.ndarray) -> np.ndarray:
 @settings(max_examples=30)
 @given(cases(), latitudes(), longitudes(), st.data())
 def test_points_move_as_the_rows_say(case, lat, lon, data):
-    """A point at an age is where scipy puts it, within 1e-6 m, poles and date line included."""
+    """A point at an age is where scipy puts it, assert_within 1e-6 m, poles and date line included."""
     age = data.draw(times_in(case))
     circuit = Circuit(case.history(), case.frame)
     points = Points(np.array([lat]), np.array([lon]), circuit.codes([case.plate]))
     own = move_own(circuit, points, np.array([age]))
     common = move_common(circuit, points, np.array([age]))
     truth = case.rotation(age).apply(vector_of(lat, lon))
-    within(metres_apart(vector_of(own.lat_deg[0], own.lon_deg[0]), truth), 1e-6)
-    within(metres_apart(vector_of(common.lat_deg[0, 0], common.lon_deg[0, 0]), truth), 1e-6)
+    assert_within(metres_apart(vector_of(own.lat_deg[0], own.lon_deg[0]), truth), 1e-6)
+    assert_within(metres_apart(vector_of(common.lat_deg[0, 0], common.lon_deg[0, 0]), truth), 1e-6)
     assert -180.0 <= own.lon_deg[0] < 180.0
     assert -90.0 <= own.lat_deg[0] <= 90.0
 
@@ -237,5 +237,5 @@ def test_points_of_one_plate_keep_their_distances():
     for k in range(3):
         after = places(moved.lat_deg[:, k], moved.lon_deg[:, k])
         chords = [np.linalg.norm(p[:, None] - p[None], axis=-1) * R_M for p in (before, after)]
-        within(chords[0] - chords[1], 1e-7)
+        assert_within(chords[0] - chords[1], 1e-7)
     assert math.isfinite(float(moved.lat_deg.sum()))

@@ -9,13 +9,13 @@ from hypothesis import strategies as st
 from scipy.spatial.transform import Rotation
 from strategies import (
     angles,
+    assert_within,
     metres_apart,
     quaternions,
     quaternions_apart,
     random_quaternions,
     rotation_vectors,
     unit_vectors,
-    within,
 )
 
 from restore.geometry import so3
@@ -43,7 +43,7 @@ def stage_angle(one: np.ndarray, other: np.ndarray) -> float:
 def test_composition_is_associative(a, b, c):
     """Bracketing three rotations either way gives one rotation."""
     a, b, c = Rotations(a), Rotations(b), Rotations(c)
-    within(apart((a @ b) @ c, a @ (b @ c)), ROUNDING_RAD)
+    assert_within(apart((a @ b) @ c, a @ (b @ c)), ROUNDING_RAD)
 
 
 @given(quaternions())
@@ -59,8 +59,8 @@ def test_a_rotation_and_its_inverse_cancel(a):
     """There and back is the zero rotation, in either order; inverting twice changes nothing."""
     a = Rotations(a)
     zero = Rotations.identity()
-    within(apart(a @ a.inverse(), zero), ROUNDING_RAD)
-    within(apart(a.inverse() @ a, zero), ROUNDING_RAD)
+    assert_within(apart(a @ a.inverse(), zero), ROUNDING_RAD)
+    assert_within(apart(a.inverse() @ a, zero), ROUNDING_RAD)
     assert np.array_equal(a.inverse().inverse().quaternions, a.quaternions)
 
 
@@ -68,14 +68,14 @@ def test_a_rotation_and_its_inverse_cancel(a):
 def test_the_inverse_of_a_product_turns_the_order_round(a, b):
     """(A B)^-1 = B^-1 A^-1."""
     a, b = Rotations(a), Rotations(b)
-    within(apart((a @ b).inverse(), b.inverse() @ a.inverse()), ROUNDING_RAD)
+    assert_within(apart((a @ b).inverse(), b.inverse() @ a.inverse()), ROUNDING_RAD)
 
 
 @given(quaternions(), quaternions(), unit_vectors())
 def test_the_rotation_on_the_right_acts_first(a, b, x):
     """(A B) x = A (B x), on the ground."""
     a, b = Rotations(a), Rotations(b)
-    within(metres_apart((a @ b).apply(x), a.apply(b.apply(x))), ROUNDING_M)
+    assert_within(metres_apart((a @ b).apply(x), a.apply(b.apply(x))), ROUNDING_M)
 
 
 @given(quaternions(), unit_vectors(), unit_vectors())
@@ -83,9 +83,9 @@ def test_rotations_keep_lengths_angles_and_handedness(q, x, y):
     """Lengths, scalar products and vector products come through a rotation unharmed."""
     turn = Rotations(q)
     turned_x, turned_y = turn.apply(x), turn.apply(y)
-    within(np.linalg.norm(turned_x) - 1.0, 1e-15 * 4)
-    within(turned_x @ turned_y - x @ y, 1e-15 * 4)
-    within(metres_apart(np.cross(turned_x, turned_y), turn.apply(np.cross(x, y))), ROUNDING_M)
+    assert_within(np.linalg.norm(turned_x) - 1.0, 1e-15 * 4)
+    assert_within(turned_x @ turned_y - x @ y, 1e-15 * 4)
+    assert_within(metres_apart(np.cross(turned_x, turned_y), turn.apply(np.cross(x, y))), ROUNDING_M)
 
 
 @given(rotation_vectors())
@@ -94,7 +94,7 @@ def test_the_axis_stays_where_it_is(vector):
     size = np.linalg.norm(vector)
     assume(size > 0.0)
     pole = vector / size
-    within(metres_apart(Rotations.from_vectors(vector).apply(pole), pole), ROUNDING_M)
+    assert_within(metres_apart(Rotations.from_vectors(vector).apply(pole), pole), ROUNDING_M)
 
 
 @given(quaternions(), quaternions(), unit_vectors(), fractions)
@@ -106,13 +106,13 @@ def test_q_and_minus_q_are_one_rotation(a, b, x, fraction):
     assert np.array_equal(one.as_quaternions(), other.as_quaternions())
     assert np.array_equal(one.as_vectors(), other.as_vectors())
     assert one.angle_deg() == other.angle_deg()
-    within(one.angle_to(other), 4e-16)
+    assert_within(one.angle_to(other), 4e-16)
     b = Rotations(b)
     assert np.array_equal((one @ b).as_quaternions(), (other @ b).as_quaternions())
     # at a half turn of the stage both arcs are equally short and rounding picks one
     if stage_angle(a, b.quaternions) < math.pi - 1e-6:
-        within(apart(b.between(one, fraction), b.between(other, fraction)), ROUNDING_RAD)
-        within(apart(one.between(b, fraction), other.between(b, fraction)), ROUNDING_RAD)
+        assert_within(apart(b.between(one, fraction), b.between(other, fraction)), ROUNDING_RAD)
+        assert_within(apart(one.between(b, fraction), other.between(b, fraction)), ROUNDING_RAD)
 
 
 @given(quaternions())
@@ -134,7 +134,7 @@ def test_the_length_of_a_product_stays_one():
     total = Rotations.identity()
     for i in range(len(turns)):
         total = turns[i] @ total
-    within(np.linalg.norm(total.quaternions) - 1.0, 1e-12)
+    assert_within(np.linalg.norm(total.quaternions) - 1.0, 1e-12)
 
 
 @given(rotation_vectors(), st.floats(-3.0, 3.0), st.floats(-3.0, 3.0))
@@ -142,26 +142,26 @@ def test_powers_of_a_rotation_add_up(vector, m, n):
     """A^m A^n = A^(m + n), for angles below a half turn, where the axis is not in doubt."""
     assume(np.linalg.norm(vector) < math.pi - 1e-6)
     turn = Rotations.from_vectors(vector)
-    within(apart(turn.power(m) @ turn.power(n), turn.power(m + n)), 2 * ROUNDING_RAD)
+    assert_within(apart(turn.power(m) @ turn.power(n), turn.power(m + n)), 2 * ROUNDING_RAD)
 
 
 @given(quaternions())
 def test_simple_powers(q):
     """Power 1 is the rotation, -1 its inverse, 0 the zero rotation, one half twice the whole."""
     turn = Rotations(q)
-    within(apart(turn.power(1.0), turn), ROUNDING_RAD)
-    within(apart(turn.power(-1.0), turn.inverse()), ROUNDING_RAD)
-    within(apart(turn.power(0.0), Rotations.identity()), 0.0)
-    within(apart(turn.power(0.5) @ turn.power(0.5), turn), ROUNDING_RAD)
+    assert_within(apart(turn.power(1.0), turn), ROUNDING_RAD)
+    assert_within(apart(turn.power(-1.0), turn.inverse()), ROUNDING_RAD)
+    assert_within(apart(turn.power(0.0), Rotations.identity()), 0.0)
+    assert_within(apart(turn.power(0.5) @ turn.power(0.5), turn), ROUNDING_RAD)
 
 
 @given(quaternions(), quaternions())
 def test_the_way_between_two_rotations_begins_and_ends_at_them(a, b):
     """Fraction 0 is the first to the last bit, fraction 1 the second to rounding."""
     one, other = Rotations(a), Rotations(b)
-    within(apart(one.between(other, 0.0), one), 0.0)
-    within(apart(one.between(other, 1.0), other), ROUNDING_RAD)
-    within(apart(one.between(one, 0.3), one), ROUNDING_RAD)
+    assert_within(apart(one.between(other, 0.0), one), 0.0)
+    assert_within(apart(one.between(other, 1.0), other), ROUNDING_RAD)
+    assert_within(apart(one.between(one, 0.3), one), ROUNDING_RAD)
 
 
 @given(quaternions(), quaternions(), fractions)
@@ -169,7 +169,7 @@ def test_the_way_between_is_the_same_from_either_end(a, b, fraction):
     """A to B at f is B to A at 1 - f."""
     assume(stage_angle(a, b) < math.pi - 1e-6)
     one, other = Rotations(a), Rotations(b)
-    within(apart(one.between(other, fraction), other.between(one, 1.0 - fraction)), ROUNDING_RAD)
+    assert_within(apart(one.between(other, fraction), other.between(one, 1.0 - fraction)), ROUNDING_RAD)
 
 
 @given(quaternions(), quaternions(), quaternions(), fractions)
@@ -178,9 +178,9 @@ def test_the_way_between_does_not_depend_on_the_coordinates(a, b, g, fraction):
     assume(stage_angle(a, b) < math.pi - 1e-6)
     a, b, g = Rotations(a), Rotations(b), Rotations(g)
     way = a.between(b, fraction)
-    within(apart((g @ a).between(g @ b, fraction), g @ way), 2 * ROUNDING_RAD)
-    within(apart((a @ g).between(b @ g, fraction), way @ g), 2 * ROUNDING_RAD)
-    within(apart(a.inverse().between(b.inverse(), fraction), way.inverse()), ROUNDING_RAD)
+    assert_within(apart((g @ a).between(g @ b, fraction), g @ way), 2 * ROUNDING_RAD)
+    assert_within(apart((a @ g).between(b @ g, fraction), way @ g), 2 * ROUNDING_RAD)
+    assert_within(apart(a.inverse().between(b.inverse(), fraction), way.inverse()), ROUNDING_RAD)
 
 
 @given(quaternions(), rotation_vectors(3.1), st.floats(0.0, 1.0))
@@ -189,7 +189,7 @@ def test_the_way_between_has_constant_angular_velocity(a, stage, fraction):
     start = Rotations(a)
     end = start @ Rotations.from_vectors(stage)
     covered = start.angle_to(start.between(end, fraction))
-    within(covered - fraction * np.linalg.norm(stage), ROUNDING_RAD)
+    assert_within(covered - fraction * np.linalg.norm(stage), ROUNDING_RAD)
 
 
 @given(angles(), unit_vectors())
@@ -200,7 +200,7 @@ def test_half_turns_and_tiny_turns_keep_their_angle(angle, axis):
     """
     turn = Rotations.from_vectors(axis * angle)
     size = math.hypot(*(axis * angle))
-    within(np.deg2rad(turn.angle_deg()) - size, 4e-16 * size)
+    assert_within(np.deg2rad(turn.angle_deg()) - size, 4e-16 * size)
 
 
 SHAPES = [(), (5,), (2, 3), (0,), (4, 4)]
@@ -222,7 +222,7 @@ def test_every_form_of_a_rotation_reads_back(form, shape):
     turns = turned_stack(shape)
     back = getattr(Rotations, f"from_{form}")(getattr(turns, f"as_{form}")())
     assert turns.shape == back.shape == shape
-    within(apart(turns, back), 2 * ROUNDING_RAD)
+    assert_within(apart(turns, back), 2 * ROUNDING_RAD)
 
 
 @pytest.mark.parametrize("shape", SHAPES)
@@ -231,7 +231,7 @@ def test_poles_read_back(shape):
     turns = turned_stack(shape)
     lat, lon, angle = turns.as_poles()
     assert lat.shape == lon.shape == angle.shape == shape
-    within(apart(turns, Rotations.from_poles(lat, lon, angle)), 2 * ROUNDING_RAD)
+    assert_within(apart(turns, Rotations.from_poles(lat, lon, angle)), 2 * ROUNDING_RAD)
 
 
 @pytest.mark.parametrize("shape", SHAPES)
@@ -263,7 +263,7 @@ def test_many_fractions_of_one_way():
 @given(quaternions(), unit_vectors())
 def test_turning_back_undoes_turning(q, x):
     """`rotate_back` brings every point home, on the ground."""
-    within(metres_apart(so3.rotate_back(q, so3.rotate(q, x)), x), ROUNDING_M)
+    assert_within(metres_apart(so3.rotate_back(q, so3.rotate(q, x)), x), ROUNDING_M)
 
 
 @given(rotation_vectors())
@@ -274,4 +274,4 @@ def test_logarithm_undoes_exponential_on_the_short_way(vector):
     misfit = np.linalg.norm(back - vector)
     if size > math.pi - 1e-9:
         misfit = min(misfit, np.linalg.norm(back + vector))
-    within(misfit, 1e-15 * max(size, 0.0) if size < 1.0 else ROUNDING_RAD)
+    assert_within(misfit, 1e-15 * max(size, 0.0) if size < 1.0 else ROUNDING_RAD)

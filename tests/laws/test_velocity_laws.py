@@ -5,13 +5,13 @@ from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from strategies import (
     Case,
+    assert_within,
     cases,
     chain_cases,
     dated_cases,
     partner_cases,
     perturbed,
     times_in,
-    within,
 )
 
 from restore.history.circuit import Circuit
@@ -53,7 +53,7 @@ def test_the_angular_velocity_is_the_derivative_by_age(dated):
     """eta agrees with one-sided differences towards the present, at rows' ages too."""
     case, age = dated
     assume(clear_of_other_rows(case, age))
-    within(velocity_of(case, age) - numerical_velocity(case, age), VELOCITY)
+    assert_within(velocity_of(case, age) - numerical_velocity(case, age), VELOCITY)
 
 
 @given(partner_cases())
@@ -61,7 +61,7 @@ def test_at_a_partner_change_the_rate_is_that_of_the_younger_chain(case):
     """At the shared age the rate belongs to the stage just younger, along the younger partner."""
     change = case.legs[0].older_ma
     assume(clear_of_other_rows(case, change))
-    within(velocity_of(case, change) - numerical_velocity(case, change), VELOCITY)
+    assert_within(velocity_of(case, change) - numerical_velocity(case, change), VELOCITY)
 
 
 @given(dated_cases())
@@ -74,7 +74,7 @@ def test_the_other_way_round_the_velocity_is_opposite(dated):
     history = case.history()
     eta = velocity_of(case, age)
     back = angular_velocity(Circuit(history, case.plate).at(case.frame, age))[0]
-    within(case.rotation(age).apply(eta) + back, 1e-14)
+    assert_within(case.rotation(age).apply(eta) + back, 1e-14)
 
 
 def test_without_an_answer_there_is_no_velocity():
@@ -96,7 +96,7 @@ def test_one_stage_has_its_own_velocity():
     found = Circuit(History.from_rows(rows), "B").rotations("A", [0.0, 3.0, 10.0])
     lat, lon = np.radians([40.0, 50.0])
     pole = [np.cos(lat) * np.cos(lon), np.cos(lat) * np.sin(lon), np.sin(lat)]
-    within(angular_velocity(found) + np.radians(0.5) * np.array(pole), 1e-16)
+    assert_within(angular_velocity(found) + np.radians(0.5) * np.array(pole), 1e-16)
 
 
 @settings(max_examples=12)
@@ -125,7 +125,7 @@ def test_linear_results_follow_the_rows(case, data):
         places = np.flatnonzero(jacobians.rows[0] == number)
         assert len(places) <= 1
         mine = jacobians.matrices[0, places[0]] if len(places) else np.zeros((3, 3))
-        within(mine - truth, 1e-7)
+        assert_within(mine - truth, 1e-7)
 
 
 def linear_change(
@@ -159,7 +159,7 @@ def test_on_rotation_alone_is_the_sensitivity_of_the_circuit(case, data):
     mine = sensitivity(found, [Functional(e.reshape(1, 3), none) for e in np.eye(3)])
     errors = case.history().row_errors()
     scale = max((np.trace(c) for c in errors.covariance), default=0.0)
-    within(mine.covariance(errors) - found.covariance(), 1e-12 * scale)
+    assert_within(mine.covariance(errors) - found.covariance(), 1e-12 * scale)
 
 
 @given(chain_cases(most_links=3, errors=True), st.floats(0.05, 0.95), st.floats(0.05, 0.95))
@@ -184,7 +184,7 @@ def test_a_stage_known_at_both_ends_has_one_velocity_error(case, one, other):
     ).covariance(errors)
     scale = np.trace(covariance[0])
     # of a link listed the other way round the error is turned with the partner, so only eta stays
-    within(eta[0] - eta[1], 1e-15)
+    assert_within(eta[0] - eta[1], 1e-15)
     if forward:
-        within(covariance[0] - covariance[1], 1e-12 * scale)
+        assert_within(covariance[0] - covariance[1], 1e-12 * scale)
     assert np.linalg.eigvalsh(covariance[0])[0] >= -1e-14 * scale

@@ -4,7 +4,7 @@ import csv
 from pathlib import Path
 
 import pytest
-from strategies import within
+from strategies import assert_within
 
 from restore.geometry.latitudes import (
     GRS80_E2,
@@ -29,9 +29,9 @@ def test_the_table_of_grs80_latitudes(row):
     """
     geodetic, geocentric = float(row["geodetic_lat_deg"]), float(row["geocentric_lat_deg"])
     for sign in (1.0, -1.0):
-        within(geocentric_from_geodetic(sign * geodetic) - sign * geocentric, 5.1e-11)
+        assert_within(geocentric_from_geodetic(sign * geodetic) - sign * geocentric, 5.1e-11)
         # the inverse stretches the printed rounding by at most 1 / (1 - e2)
-        within(geodetic_from_geocentric(sign * geocentric) - sign * geodetic, 5.1e-11)
+        assert_within(geodetic_from_geocentric(sign * geocentric) - sign * geodetic, 5.1e-11)
 
 
 def test_the_table_is_all_there():
@@ -43,13 +43,13 @@ def test_the_table_is_all_there():
 def test_the_ellipsoid_is_grs80():
     """e2 = f (2 - f) with the flattening 1 / 298.257222101 (Moritz 2000), to the digits printed."""
     flattening = 1.0 / 298.257222101
-    within(GRS80_E2 - flattening * (2.0 - flattening), 5e-14)
+    assert_within(GRS80_E2 - flattening * (2.0 - flattening), 5e-14)
 
 
 def test_geodetic_latitudes_are_turned_on_the_way_in_and_back_on_the_way_out():
     """`geodetic` turns 45 to 44.8075767831 (table) and back; `as-given` leaves it."""
-    within(Latitudes("geodetic").inward(45.0) - 44.8075767831, 5.1e-11)
-    within(Latitudes("geodetic").outward(44.8075767831) - 45.0, 5.1e-11)
+    assert_within(Latitudes("geodetic").inward(45.0) - 44.8075767831, 5.1e-11)
+    assert_within(Latitudes("geodetic").outward(44.8075767831) - 45.0, 5.1e-11)
     assert Latitudes("as-given").inward(45.0) == Latitudes().outward(45.0) == 45.0
 
 

@@ -4,7 +4,7 @@ import math
 
 import numpy as np
 import pytest
-from strategies import turn_of, vector_of, within
+from strategies import assert_within, turn_of, vector_of
 
 from restore.errors import HistoryError
 from restore.history.circuit import Circuit
@@ -68,8 +68,8 @@ def test_a_manifest_is_read_as_it_says(tmp_path):
     assert (rows[1].plate, rows[1].relative_to, rows[1].age_ma) == ("afra", "deep", 20.5)
     # held plate and turned to the present: two inversions, so the row is as printed
     meant = math.radians(5.0) * vector_of(40.0, 50.0)
-    within(turn_of(rows[0]).as_rotvec() - meant, 1e-15)
-    within(rows[1].pole_lat_deg - 44.8075767831, 5.1e-11)
+    assert_within(turn_of(rows[0]).as_rotvec() - meant, 1e-15)
+    assert_within(rows[1].pole_lat_deg - 44.8075767831, 5.1e-11)
     assert history.place_of(1).endswith("b.txt:2")
 
 
@@ -86,7 +86,7 @@ def test_from_present_holds_down_to_today(tmp_path):
     history = History.read(lay_out(tmp_path, text))
     circuit = Circuit(history, "norda")
     assert circuit.covered("afra") == [(0.0, 10.0)]
-    within(np.radians(circuit.at("afra", 5.0).rotations.angle_deg()) - math.radians(2.5), 1e-15)
+    assert_within(np.radians(circuit.at("afra", 5.0).rotations.angle_deg()) - math.radians(2.5), 1e-15)
     (tmp_path / "history.toml").write_text(text.replace("from_present = true\n", ""))
     later = Circuit(History.read(tmp_path / "history.toml"), "norda")
     assert later.covered("afra") == [(10.0, 10.0)]

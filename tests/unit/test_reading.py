@@ -6,7 +6,7 @@ import math
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
-from strategies import place_of, turn_of, vector_of, within
+from strategies import assert_within, place_of, turn_of, vector_of
 
 from restore.errors import HistoryError, TableError
 from restore.files.delimited import Layout
@@ -79,9 +79,9 @@ def test_every_way_to_print_a_row_is_read_as_meant(table, turns, holds, sense, c
     (row,), findings = table(text, conventions=conventions)
     assert findings == []
     assert (row.plate, row.relative_to, row.age_ma) == ("A", "B", 12.5)
-    within((turn_of(row).inv() * meant).magnitude(), 1e-14)
+    assert_within((turn_of(row).inv() * meant).magnitude(), 1e-14)
     assert row.covariance is not None
-    within(row.covariance - COVARIANCE, 1e-12 * np.abs(COVARIANCE).max())
+    assert_within(row.covariance - COVARIANCE, 1e-12 * np.abs(COVARIANCE).max())
 
 
 def test_a_row_may_state_the_side_of_its_covariance(table):
@@ -92,8 +92,8 @@ def test_a_row_may_state_the_side_of_its_covariance(table):
     text += "A,B,20,90,0,90,4e-7,0,0,2e-7,0,1e-7,\n"
     (stated, default), _ = table(text)
     diagonal = np.diag([4e-7, 2e-7, 1e-7])
-    within(stated.covariance - turn.as_matrix().T @ diagonal @ turn.as_matrix(), 1e-21)
-    within(default.covariance - diagonal, 1e-22)
+    assert_within(stated.covariance - turn.as_matrix().T @ diagonal @ turn.as_matrix(), 1e-21)
+    assert_within(default.covariance - diagonal, 1e-22)
 
 
 def test_published_covariances_are_scaled(table):
@@ -102,7 +102,7 @@ def test_published_covariances_are_scaled(table):
     text += "A,B,10,40,50,5,2,11,3,-1,0.5,4,0.25,6,1e-7\n"
     (row,), _ = table(text)
     truth = np.array([[3, -1, 0.5], [-1, 4, 0.25], [0.5, 0.25, 6]]) * 1e-7 / 2
-    within(row.covariance - truth, 1e-21)
+    assert_within(row.covariance - truth, 1e-21)
     assert row.dof == 11.0
 
 
@@ -110,7 +110,7 @@ def test_geodetic_poles_are_turned_to_geocentric(table):
     """A pole at geodetic 45N is at geocentric 44.8075767831 (table of GRS80), to its last digit."""
     text = f"{HEAD}\nA,B,10,45,50,5\n"
     (row,), _ = table(text, conventions=Conventions(latitudes="geodetic"))
-    within(row.pole_lat_deg - 44.8075767831, 5.1e-11)
+    assert_within(row.pole_lat_deg - 44.8075767831, 5.1e-11)
     assert table(text)[0][0].pole_lat_deg == 45.0
 
 
@@ -146,7 +146,7 @@ def test_angular_velocities(table, unit, size):
     text += f"A,B,0,{-0.6 * size!r},{0.8 * size!r}\nC,B,0,0,0\n"
     rows, findings = table(text)
     assert findings == []
-    within((turn_of(rows[1]).as_rotvec() + np.radians([0.0, -0.6, 0.8])), 1e-16)
+    assert_within((turn_of(rows[1]).as_rotvec() + np.radians([0.0, -0.6, 0.8])), 1e-16)
     assert [r.angle_deg for r in rows[2:]] == [0.0, 0.0]
 
 
@@ -167,7 +167,7 @@ def test_a_pole_ellipse_is_an_error(table):
         (angle * math.radians(1.0)) ** 2 / k2,
     ]
     assert row.covariance is not None
-    within(np.diag(row.covariance) / truth - 1.0, 1e-7)
+    assert_within(np.diag(row.covariance) / truth - 1.0, 1e-7)
 
 
 def test_zero_rows_need_no_pole(table):

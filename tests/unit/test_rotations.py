@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from strategies import quaternions_apart, random_quaternions, within
+from strategies import assert_within, quaternions_apart, random_quaternions
 
 from restore.geometry.rotations import NO_POLE_BELOW_RAD, Rotations
 
@@ -29,7 +29,7 @@ def test_a_quaternion_without_a_direction_is_refused(value):
 def test_quaternions_of_any_length_are_taken(size):
     """Quaternions of any length but zero say the same rotation, as the door promises."""
     q = np.array([0.5, -0.5, 0.5, 0.5])
-    within(quaternions_apart(Rotations.from_quaternions(q * size).quaternions, q), 1e-15)
+    assert_within(quaternions_apart(Rotations.from_quaternions(q * size).quaternions, q), 1e-15)
 
 
 @pytest.mark.parametrize("bad", [[1.0, 2.0], [1.0, 2.0, 3.0, 4.0], [[1.0], [2.0], [3.0]], 1.0])
@@ -60,8 +60,8 @@ def test_a_slightly_rounded_matrix_is_taken():
     """A matrix printed to seven digits is taken, and what comes out is a proper rotation."""
     rough = np.round(Rotations.from_poles(37.0, -120.0, 77.0).as_matrices(), 7)
     exact = Rotations.from_matrices(rough).as_matrices()
-    within(exact @ exact.T - np.eye(3), 1e-15)
-    within(exact - rough, 1e-7)
+    assert_within(exact @ exact.T - np.eye(3), 1e-15)
+    assert_within(exact - rough, 1e-7)
 
 
 def test_zero_rotations_have_no_pole():
@@ -69,7 +69,7 @@ def test_zero_rotations_have_no_pole():
     tiny = 0.5 * NO_POLE_BELOW_RAD
     lat, lon, angle = Rotations.from_vectors([[0.0, 0, 0], [tiny, 0, 0], [0, 0, 1e-6]]).as_poles()
     assert np.isnan(lat).tolist() == np.isnan(lon).tolist() == [True, True, False]
-    within(np.deg2rad(angle) - [0.0, tiny, 1e-6], 1e-21)
+    assert_within(np.deg2rad(angle) - [0.0, tiny, 1e-6], 1e-21)
     assert lat[2] == 90.0
 
 
@@ -77,7 +77,7 @@ def test_a_zero_angle_needs_no_pole():
     """A zero angle gives the zero rotation whatever the pole says; its neighbours keep theirs."""
     turns = Rotations.from_poles([np.nan, 95.0, 90.0], [np.nan, np.inf, 0.0], [0.0, 0.0, 90.0])
     assert np.array_equal(turns.quaternions[:2], [[1.0, 0, 0, 0]] * 2)
-    within(turns.apply([1.0, 0, 0])[2] - [0.0, 1.0, 0.0], 1e-15)
+    assert_within(turns.apply([1.0, 0, 0])[2] - [0.0, 1.0, 0.0], 1e-15)
 
 
 def test_missing_poles_of_true_rotations_are_carried_through():
@@ -101,21 +101,21 @@ def test_missing_poles_of_true_rotations_are_carried_through():
 def test_poles_are_written_one_way(pole, written):
     """Angles come out in 0..180 with the pole that fits, longitudes in [-180, 180)."""
     lat, lon, angle = (float(v) for v in Rotations.from_poles(*pole).as_poles())
-    within([lat - written[0], angle - written[2]], 1e-13)
+    assert_within([lat - written[0], angle - written[2]], 1e-13)
     if written[1] is not None:
-        within(lon - written[1], 1e-13)
+        assert_within(lon - written[1], 1e-13)
 
 
 def test_anticlockwise_is_positive():
     """About the north pole by +90 degrees 0N 0E goes to 0N 90E; about 0N 0E 0N 90E goes to 90N."""
-    within(Rotations.from_poles(90, 0, 90).apply([1.0, 0, 0]) - [0, 1, 0], 1e-15)
-    within(Rotations.from_poles(0, 0, 90).apply([0, 1.0, 0]) - [0, 0, 1], 1e-15)
+    assert_within(Rotations.from_poles(90, 0, 90).apply([1.0, 0, 0]) - [0, 1, 0], 1e-15)
+    assert_within(Rotations.from_poles(0, 0, 90).apply([0, 1.0, 0]) - [0, 0, 1], 1e-15)
 
 
 def test_the_order_of_a_chain():
     """P > A is 90 deg about x, A > F 90 deg about y: 0N 90E goes to 0N 0E (worked case)."""
     chain = Rotations.from_poles(0, 90, 90) @ Rotations.from_poles(0, 0, 90)
-    within(chain.apply([0.0, 1.0, 0.0]) - [1.0, 0.0, 0.0], 1e-15)
+    assert_within(chain.apply([0.0, 1.0, 0.0]) - [1.0, 0.0, 0.0], 1e-15)
 
 
 def test_rotations_are_indexed_like_arrays_of_their_shape():

@@ -7,7 +7,7 @@ given length may be wrong by. The scalar weights are compared one by one, relati
 import mpmath as mp
 import numpy as np
 import pytest
-from strategies import within
+from strategies import assert_within
 
 from restore.geometry import so3, sphere
 
@@ -56,7 +56,7 @@ def test_right_jacobian(axis):
     for angle in ANGLES:
         v = angle * AXES[axis]
         misfit = relative(so3.right_jacobian(v), mp_right_jacobian(v))
-        within(misfit, RELATIVE, f"angle {angle:.3g}")
+        assert_within(misfit, RELATIVE, f"angle {angle:.3g}")
 
 
 @pytest.mark.parametrize("fraction", FRACTIONS)
@@ -67,7 +67,7 @@ def test_stage_jacobian(fraction):
             v = angle * axis
             truth = mp_stage_jacobian(v, fraction)
             misfit = relative(so3.stage_jacobian(v, fraction), truth)
-            within(misfit, RELATIVE, f"angle {angle:.3g}")
+            assert_within(misfit, RELATIVE, f"angle {angle:.3g}")
 
 
 @pytest.mark.parametrize("fraction", FRACTIONS)
@@ -86,7 +86,7 @@ def test_stage_weights_one_by_one(fraction):
         floor += mp.mpf("1e-60")
         for mine, right in zip(found, (along, across, turned), strict=True):
             misfit = abs(mp.mpf(float(mine)) - right)
-            within(float(misfit / (abs(right) + floor / RELATIVE)), RELATIVE, f"angle {angle:.3g}")
+            assert_within(float(misfit / (abs(right) + floor / RELATIVE)), RELATIVE, f"angle {angle:.3g}")
 
 
 def test_no_stage_at_all():
@@ -124,7 +124,7 @@ def test_the_exponential():
             for mine, right in zip(found, truth, strict=True):
                 # at a half turn w is the rounding of the angle itself
                 size = abs(right) + (4e-16 / RELATIVE if angle > 3.0 else mp.mpf("1e-60"))
-                within(float(abs(mp.mpf(float(mine)) - right) / size), RELATIVE)
+                assert_within(float(abs(mp.mpf(float(mine)) - right) / size), RELATIVE)
 
 
 def test_the_logarithm():
@@ -140,7 +140,7 @@ def test_the_logarithm():
             truth = [2 * mp.atan2(sine, w) / sine * c for c in v]
             found = so3.logarithm(q)
             worst = max(abs(mp.mpf(float(mine)) - right) for mine, right in zip(found, truth, strict=True))
-            within(float(worst) / angle, RELATIVE)
+            assert_within(float(worst) / angle, RELATIVE)
 
 
 def mp_unit(lat: float, lon: float) -> list[mp.mpf]:
@@ -168,7 +168,7 @@ def test_distance_from_a_millimetre_to_the_antipode(metres):
         cross = [a[i] * b[j] - a[j] * b[i] for i, j in ((1, 2), (2, 0), (0, 1))]
         dot = sum(p * q for p, q in zip(a, b, strict=True))
         truth = mp.atan2(mp.sqrt(sum(c * c for c in cross)), dot)
-        within(float((mp.mpf(float(sphere.angular_distance(start, end))) - truth) * radius), 3e-9)
+        assert_within(float((mp.mpf(float(sphere.angular_distance(start, end))) - truth) * radius), 3e-9)
 
 
 def test_unit_vectors_by_digits():
@@ -177,4 +177,4 @@ def test_unit_vectors_by_digits():
         for lon in (0.0, 180.0, -180.0, 90.0, 179.9999999, -77.7, 1e-12):
             found = sphere.unit_vectors(lat, lon)
             for mine, right in zip(found, mp_unit(lat, lon), strict=True):
-                within(float(mp.mpf(float(mine)) - right), 3e-16)
+                assert_within(float(mp.mpf(float(mine)) - right), 3e-16)

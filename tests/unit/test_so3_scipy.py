@@ -9,7 +9,7 @@ import math
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation, Slerp
-from strategies import quaternions_apart, random_quaternions, scipy_of, within
+from strategies import assert_within, quaternions_apart, random_quaternions, scipy_of
 
 from restore.geometry import so3
 from restore.geometry.rotations import Rotations
@@ -56,23 +56,23 @@ def apart(ours: np.ndarray, theirs: Rotation) -> np.ndarray:
 def test_products():
     """q p is scipy's product. Measured: 1.1e-15 rad."""
     one, other = pairs()
-    within(apart(so3.multiply(one, other), scipy_of(one) * scipy_of(other)), BAR_RAD)
+    assert_within(apart(so3.multiply(one, other), scipy_of(one) * scipy_of(other)), BAR_RAD)
     composed = Rotations(one) @ Rotations(other)
-    within(apart(composed.quaternions, scipy_of(one) * scipy_of(other)), BAR_RAD)
+    assert_within(apart(composed.quaternions, scipy_of(one) * scipy_of(other)), BAR_RAD)
 
 
 def test_inverses():
     """The inverse is scipy's. Measured: 6e-16 rad."""
     q = cases()
-    within(apart(Rotations(q).inverse().quaternions, scipy_of(q).inv()), BAR_RAD)
+    assert_within(apart(Rotations(q).inverse().quaternions, scipy_of(q).inv()), BAR_RAD)
 
 
 def test_matrices_out_and_in():
     """Matrices, out and in, are scipy's, by element and by angle. Measured: 1e-15, 8e-16 rad."""
     q = cases()
     theirs = scipy_of(q).as_matrix()
-    within(Rotations(q).as_matrices() - theirs, BAR_RAD)
-    within(apart(Rotations.from_matrices(theirs).quaternions, scipy_of(q)), BAR_RAD)
+    assert_within(Rotations(q).as_matrices() - theirs, BAR_RAD)
+    assert_within(apart(Rotations.from_matrices(theirs).quaternions, scipy_of(q)), BAR_RAD)
 
 
 def test_half_turn_matrices_in():
@@ -81,8 +81,8 @@ def test_half_turn_matrices_in():
         axis = axis / np.linalg.norm(axis)
         matrix = 2.0 * np.outer(axis, axis) - np.eye(3)
         turn = Rotations.from_matrices(matrix)
-        within(turn.angle_deg() - 180.0, 1e-12)
-        within(np.cross(turn.quaternions[1:], axis), 1e-15)
+        assert_within(turn.angle_deg() - 180.0, 1e-12)
+        assert_within(np.cross(turn.quaternions[1:], axis), 1e-15)
 
 
 def test_vectors_out_and_in():
@@ -95,9 +95,11 @@ def test_vectors_out_and_in():
     misfit = np.linalg.norm(ours - theirs, axis=1)
     half = np.linalg.norm(theirs, axis=1) > math.pi - 1e-12
     misfit[half] = np.minimum(misfit, np.linalg.norm(ours + theirs, axis=1))[half]
-    within(misfit, BAR_RAD)
+    assert_within(misfit, BAR_RAD)
     vectors = np.concatenate([degenerate_vectors(), 7.0 * random_quaternions(63, COUNT)[:, 1:]])
-    within(apart(Rotations.from_vectors(vectors).quaternions, Rotation.from_rotvec(vectors)), BAR_RAD)
+    assert_within(
+        apart(Rotations.from_vectors(vectors).quaternions, Rotation.from_rotvec(vectors)), BAR_RAD
+    )
 
 
 def test_tiny_vectors_keep_their_digits():
@@ -105,16 +107,16 @@ def test_tiny_vectors_keep_their_digits():
     sizes = 10.0 ** np.arange(-300.0, -2.0, 7.0)
     vectors = sizes[:, np.newaxis] * np.array([1 / 3, -2 / 3, 2 / 3])
     back = Rotations.from_vectors(vectors).as_vectors()
-    within((back - vectors) / sizes[:, np.newaxis], 4e-16)
+    assert_within((back - vectors) / sizes[:, np.newaxis], 4e-16)
 
 
 def test_angles():
     """Angles are scipy's magnitudes from 0 to a half turn. Measured: 9e-16 rad."""
     q = cases()
-    within(np.radians(Rotations(q).angle_deg()) - scipy_of(q).magnitude(), BAR_RAD)
+    assert_within(np.radians(Rotations(q).angle_deg()) - scipy_of(q).magnitude(), BAR_RAD)
     one, other = pairs()
     theirs = (scipy_of(one).inv() * scipy_of(other)).magnitude()
-    within(Rotations(one).angle_to(Rotations(other)) - theirs, BAR_RAD)
+    assert_within(Rotations(one).angle_to(Rotations(other)) - theirs, BAR_RAD)
 
 
 def test_turned_points():
@@ -123,10 +125,10 @@ def test_turned_points():
     x = np.random.default_rng(64).normal(size=(len(q), 3))
     x /= np.linalg.norm(x, axis=1, keepdims=True)
     theirs = scipy_of(q).apply(x)
-    within(np.linalg.norm(Rotations(q).apply(x) - theirs, axis=1), BAR_RAD)
-    within(np.linalg.norm(so3.rotate_back(q, theirs) - x, axis=1), BAR_RAD)
+    assert_within(np.linalg.norm(Rotations(q).apply(x) - theirs, axis=1), BAR_RAD)
+    assert_within(np.linalg.norm(so3.rotate_back(q, theirs) - x, axis=1), BAR_RAD)
     matrices = so3.matrices(q)
-    within(np.linalg.norm(np.einsum("nij,nj->ni", matrices, x) - theirs, axis=1), BAR_RAD)
+    assert_within(np.linalg.norm(np.einsum("nij,nj->ni", matrices, x) - theirs, axis=1), BAR_RAD)
 
 
 @pytest.mark.parametrize("exponent", [0.0, 1e-9, 0.25, 0.5, 1.0, 1.7, -0.3, -1.0])
@@ -135,7 +137,7 @@ def test_powers(exponent):
     q = cases()
     q = q[np.abs(q[:, 0]) > 1e-12]
     theirs = Rotation.from_rotvec(exponent * scipy_of(q).as_rotvec())
-    within(apart(Rotations(q).power(exponent).quaternions, theirs), BAR_RAD)
+    assert_within(apart(Rotations(q).power(exponent).quaternions, theirs), BAR_RAD)
 
 
 @pytest.mark.parametrize("fraction", [0.0, 1e-9, 0.25, 0.5, 0.999, 1.0])
@@ -151,7 +153,7 @@ def test_the_way_between(fraction):
     one, other, stage = one[clear], other[clear], stage[clear]
     assert len(one) > 8000
     theirs = scipy_of(one) * Rotation.from_rotvec(fraction * stage)
-    within(apart(Rotations(one).between(Rotations(other), fraction).quaternions, theirs), BAR_RAD)
+    assert_within(apart(Rotations(one).between(Rotations(other), fraction).quaternions, theirs), BAR_RAD)
 
 
 def test_the_way_between_by_slerp_itself():
@@ -164,7 +166,7 @@ def test_the_way_between_by_slerp_itself():
         if (ends[0].inv() * ends[1]).magnitude() > math.pi - 1e-9:
             continue
         theirs = Slerp([0.0, 1.0], ends)(fractions)
-        within(apart(so3.slerp(one[i], other[i], fractions), theirs), BAR_RAD)
+        assert_within(apart(so3.slerp(one[i], other[i], fractions), theirs), BAR_RAD)
 
 
 def test_a_stage_near_half_a_turn():
@@ -174,7 +176,7 @@ def test_a_stage_near_half_a_turn():
         axis = axis / np.linalg.norm(axis)
         end = (scipy_of(start) * Rotation.from_rotvec(NEAR_HALF * axis)).as_quat(scalar_first=True)
         theirs = scipy_of(start) * Rotation.from_rotvec(fraction * NEAR_HALF * axis)
-        within(apart(so3.slerp(start, end, fraction), theirs), BAR_RAD)
+        assert_within(apart(so3.slerp(start, end, fraction), theirs), BAR_RAD)
         exact = so3.multiply(start, np.array([0.0, *axis]))
         ways = [
             apart(
@@ -183,7 +185,7 @@ def test_a_stage_near_half_a_turn():
             )
             for sign in (1.0, -1.0)
         ]
-        within(np.minimum(*ways), BAR_RAD)
+        assert_within(np.minimum(*ways), BAR_RAD)
 
 
 def test_the_parts_of_an_arc_are_orthonormal():
@@ -191,11 +193,11 @@ def test_the_parts_of_an_arc_are_orthonormal():
     one, other = pairs()
     arc = so3.arc(one, other)
     moving = np.linalg.norm(arc.side, axis=1) > 0.0
-    within(np.linalg.norm(arc.side[moving], axis=1) - 1.0, 1e-15)
+    assert_within(np.linalg.norm(arc.side[moving], axis=1) - 1.0, 1e-15)
     # the side of a tiny stage has few digits; across the start it must stand all the same,
     # since what it lacks there is multiplied by the stage angle only
     slant = np.sum(arc.start * arc.side, axis=1)
-    within(slant * np.sin(arc.half), 1e-15)
+    assert_within(slant * np.sin(arc.half), 1e-15)
     assert np.all((arc.half >= 0.0) & (arc.half <= math.pi / 2))
 
 
@@ -209,11 +211,11 @@ def test_poles_are_axes():
     axis = np.stack([np.cos(a) * np.cos(b), np.cos(a) * np.sin(b), np.sin(a)], axis=-1)
     theirs = Rotation.from_rotvec(np.radians(angle)[:, np.newaxis] * axis)
     turns = Rotations.from_poles(lat, lon, angle)
-    within(apart(turns.quaternions, theirs), BAR_RAD)
+    assert_within(apart(turns.quaternions, theirs), BAR_RAD)
     out_lat, out_lon, out_angle = turns.as_poles()
     assert np.all((out_angle >= 0.0) & (out_angle <= 180.0))
     zero = out_angle < 1e-10
     assert np.isnan(out_lat[zero]).all()
     assert np.isnan(out_lon[zero]).all()
     back = Rotations.from_poles(out_lat[~zero], out_lon[~zero], out_angle[~zero])
-    within(apart(back.quaternions, theirs[~zero]), BAR_RAD)
+    assert_within(apart(back.quaternions, theirs[~zero]), BAR_RAD)

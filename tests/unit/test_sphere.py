@@ -4,7 +4,7 @@ import math
 
 import numpy as np
 import pytest
-from strategies import R_M, vector_of, within
+from strategies import R_M, assert_within, vector_of
 
 from restore.geometry import sphere
 
@@ -26,7 +26,7 @@ HALF_GLOBE_KM = 20_015.114
 )
 def test_axes(lat, lon, vector):
     """x points to 0N 0E, y to 0N 90E, z to the north pole, to 1e-9 m."""
-    within((sphere.unit_vectors(lat, lon) - vector) * R_M, 1e-9)
+    assert_within((sphere.unit_vectors(lat, lon) - vector) * R_M, 1e-9)
 
 
 @pytest.mark.parametrize(
@@ -37,7 +37,7 @@ def test_the_date_line_is_minus_180(asked, written):
     """Longitudes of the date line are written -180, beyond it on the other side."""
     assert sphere.wrap_longitude(asked) == written
     _, lon = sphere.lat_lon(sphere.unit_vectors(10.0, asked))
-    within(math.radians(math.remainder(float(lon) - written, 360.0)) * R_M, 1e-8)
+    assert_within(math.radians(math.remainder(float(lon) - written, 360.0)) * R_M, 1e-8)
 
 
 def test_a_hair_below_the_date_line_stays_there():
@@ -61,7 +61,7 @@ def test_latitude_near_the_pole_keeps_its_digits():
     """A point 1 mm from the pole is 1 mm from it, to 2e-9 m, by its own latitude."""
     angle = 1e-3 / R_M
     lat, lon = sphere.lat_lon([math.sin(angle), 0.0, math.cos(angle)])
-    within((math.radians(90.0 - float(lat)) - angle) * R_M, 2e-9)
+    assert_within((math.radians(90.0 - float(lat)) - angle) * R_M, 2e-9)
     assert lon == 0.0
 
 
@@ -69,7 +69,7 @@ def test_vectors_of_any_length_have_a_place():
     """Latitude and longitude do not depend on the length, from 1e-150 to 1e150."""
     for size in (1e-150, 1e-8, 3.0, 1e150):
         lat, lon = sphere.lat_lon(vector_of(12.5, -77.25) * size)
-        within([float(lat) - 12.5, float(lon) + 77.25], 1e-13)
+        assert_within([float(lat) - 12.5, float(lon) + 77.25], 1e-13)
 
 
 def test_nothing_has_no_place():
@@ -130,18 +130,18 @@ def test_known_distances(one, other, km):
     """Half the globe, a quarter, nothing, and one degree across the date line and over the pole."""
     found = sphere.distance_km(sphere.unit_vectors(*one), sphere.unit_vectors(*other))
     # the constant is typed to a metre
-    within((found - km) * 1e3, 1.0)
+    assert_within((found - km) * 1e3, 1.0)
 
 
 def test_distance_on_another_sphere():
     """A stated radius scales the distance: a quarter globe of radius 1000 km is 1570.796 km."""
     found = sphere.distance_km([1.0, 0, 0], [0, 0, 1.0], radius_km=1000.0)
-    within(found - 1570.796327, 1e-6)
+    assert_within(found - 1570.796327, 1e-6)
 
 
 def test_vectors_need_not_have_unit_length_for_angles():
     """The angle between (3, 0, 0) and (0, 0.1, 0) is a right angle."""
-    within(sphere.angular_distance([3.0, 0, 0], [0, 0.1, 0]) - math.pi / 2, 1e-16)
+    assert_within(sphere.angular_distance([3.0, 0, 0], [0, 0.1, 0]) - math.pi / 2, 1e-16)
 
 
 @pytest.mark.parametrize(
@@ -161,7 +161,7 @@ def test_known_azimuths(start, end, azimuth):
     """North 0, east 90, south 180, west 270, also across the date line; 0 for no direction."""
     found = float(sphere.azimuth_deg(sphere.unit_vectors(*start), sphere.unit_vectors(*end)))
     assert 0.0 <= found < 360.0
-    within(math.remainder(found - azimuth, 360.0), 1e-13)
+    assert_within(math.remainder(found - azimuth, 360.0), 1e-13)
 
 
 def test_the_azimuth_between_antipodes_is_zero():
@@ -175,8 +175,8 @@ def test_the_tangent_frame_at_the_poles():
     """At a pole the longitude counts as 0: east is y; north is -x in the north, x in the south."""
     for z, north_x in ((1.0, -1.0), (-1.0, 1.0)):
         east, north = sphere.tangent_frame([0.0, 0.0, z])
-        within(east - [0.0, 1.0, 0.0], 0.0)
-        within(north - [north_x, 0.0, 0.0], 0.0)
+        assert_within(east - [0.0, 1.0, 0.0], 0.0)
+        assert_within(north - [north_x, 0.0, 0.0], 0.0)
 
 
 @pytest.mark.parametrize(
@@ -186,7 +186,7 @@ def test_the_tangent_frame_at_the_poles():
 def test_compass(east, north, direction):
     """Directions run clockwise from north in [0, 360): a hair west of north is written 0."""
     found = sphere.compass_deg(float(east), float(north))
-    within(found - direction, 1e-13)
+    assert_within(found - direction, 1e-13)
 
 
 def test_colatitude_has_its_own_ranges():
@@ -194,14 +194,14 @@ def test_colatitude_has_its_own_ranges():
     colat, east = sphere.colatitude_east_longitude(
         [[0, 0, 1.0], [0, 0, -1.0], [0, -1.0, 0], [-1.0, -1e-20, 0], [1.0, -1e-20, 0]]
     )
-    within(colat - [0, 180, 90, 90, 90], 1e-13)
-    within(east - [0, 0, 270, 180, 0], 1e-13)
+    assert_within(colat - [0, 180, 90, 90, 90], 1e-13)
+    assert_within(east - [0, 0, 270, 180, 0], 1e-13)
 
 
 def test_products():
     """Scalar and vector products against numpy's, and a length where squares would underflow."""
     random = np.random.default_rng(82)
     a, b = random.normal(size=(2, 100, 3))
-    within(sphere.dot(a, b) - np.einsum("ni,ni->n", a, b), 1e-14)
-    within(sphere.cross(a, b) - np.cross(a, b), 1e-14)
-    within(sphere.length(np.array([3e-200, 4e-200, 0.0])) / 5e-200 - 1.0, 1e-15)
+    assert_within(sphere.dot(a, b) - np.einsum("ni,ni->n", a, b), 1e-14)
+    assert_within(sphere.cross(a, b) - np.cross(a, b), 1e-14)
+    assert_within(sphere.length(np.array([3e-200, 4e-200, 0.0])) / 5e-200 - 1.0, 1e-15)

@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 from scipy import stats
-from strategies import within
+from strategies import assert_within
 
 from restore.geometry.uncertain import (
     RowErrors,
@@ -31,9 +31,9 @@ def test_factors_against_scipy(probability):
     """k^2 is the chi-square quantile of 2, or twice the F quantile of (2, nu)."""
     for dof in (0.5, 1.0, 3.0, 77.0, 1e6):
         k2 = 2.0 * stats.f.ppf(probability, 2, dof)
-        within(float(confidence_factor(dof, probability)) ** 2 / k2 - 1.0, 1e-9)
+        assert_within(float(confidence_factor(dof, probability)) ** 2 / k2 - 1.0, 1e-9)
     k2 = stats.chi2.ppf(probability, 2)
-    within(float(confidence_factor(probability=probability)) ** 2 / k2 - 1.0, 1e-12)
+    assert_within(float(confidence_factor(probability=probability)) ** 2 / k2 - 1.0, 1e-12)
     assert np.isnan(confidence_factor(np.nan))
 
 
@@ -46,10 +46,10 @@ def test_axes_of_an_ellipse(azimuth, ratio):
     longer, shorter = np.array([math.sin(a), math.cos(a)]), np.array([math.cos(a), -math.sin(a)])
     matrix = np.outer(longer, longer) * major**2 + np.outer(shorter, shorter) * minor**2
     found = ellipse(matrix[0, 0], matrix[1, 1], matrix[0, 1], 2.0, 0.5)
-    within(found.major_km - major, 1e-12)
+    assert_within(found.major_km - major, 1e-12)
     # the shorter axis is the root of a difference: 1e-16 of 49 km^2 leaves 1e-7 km of it
-    within(found.minor_km - minor, 2e-7)
-    within(math.remainder(float(found.azimuth_deg) - azimuth, 180.0), 1e-12)
+    assert_within(found.minor_km - minor, 2e-7)
+    assert_within(math.remainder(float(found.azimuth_deg) - azimuth, 180.0), 1e-12)
     assert 0.0 <= found.azimuth_deg < 180.0
 
 
@@ -85,13 +85,13 @@ def test_rows_stand_once_after_combining():
     both = Sensitivity.combined([one, other])
     used = both.rows[both.rows >= 0]
     assert sorted(used) == [0, 1]
-    within(both.covariance(ERRORS)[0] - 9.0 * np.eye(3), 0.0)
+    assert_within(both.covariance(ERRORS)[0] - 9.0 * np.eye(3), 0.0)
 
 
 def test_a_row_without_a_say_does_not_make_a_result_unknown():
     """A row of unknown error counts only where its Jacobian is not zero."""
     idle = sensed([[0, 2]], [[np.eye(3), np.zeros((3, 3))]])
-    within(idle.covariance(ERRORS)[0] - np.eye(3), 0.0)
+    assert_within(idle.covariance(ERRORS)[0] - np.eye(3), 0.0)
     used = sensed([[0, 2]], [[np.eye(3), 1e-9 * np.eye(3)]])
     assert np.isnan(used.covariance(ERRORS)).all()
 
@@ -99,7 +99,7 @@ def test_a_row_without_a_say_does_not_make_a_result_unknown():
 def test_shares_of_the_variance():
     """Rows of variance 1 and 4 with Jacobians 2 and 1 bring half each; without error, nothing."""
     both = sensed([[0, 1]], [[2.0 * np.eye(3), np.eye(3)]])
-    within(both.variance_shares(ERRORS)[0] - [0.5, 0.5], 0.0)
+    assert_within(both.variance_shares(ERRORS)[0] - [0.5, 0.5], 0.0)
     none = sensed([[-1, -1]], np.zeros((1, 2, 3, 3)))
     assert not none.variance_shares(ERRORS).any()
 
@@ -108,7 +108,7 @@ def test_cross_covariance_is_of_shared_rows():
     """sum J1 C J2^T over shared rows; NaN where a shared row is not known; zero where none is."""
     one = sensed([[0, 1]], [[np.eye(3), 2.0 * np.eye(3)]])
     other = sensed([[1, -1]], [[3.0 * np.eye(3), np.eye(3)]])
-    within(one.cross_covariance(other, ERRORS)[0] - 24.0 * np.eye(3), 0.0)
+    assert_within(one.cross_covariance(other, ERRORS)[0] - 24.0 * np.eye(3), 0.0)
     unknown = sensed([[2]], [[np.eye(3)]])
     assert np.isnan(unknown.cross_covariance(unknown, ERRORS)).all()
     assert not unknown.cross_covariance(one, ERRORS).any()
@@ -120,9 +120,9 @@ def test_degrees_of_freedom():
     Welch 1947 and Satterthwaite 1946: (1 + 4)^2 / (4^2 / 10) = 15.625 for variances 1 and 4.
     """
     alone = sensed([[1]], [[np.eye(3)]])
-    within(alone.effective_dof(ERRORS) - 10.0, 1e-12)
+    assert_within(alone.effective_dof(ERRORS) - 10.0, 1e-12)
     both = sensed([[0, 1]], [[np.eye(3), np.eye(3)]])
-    within(both.effective_dof(ERRORS) - 15.625, 1e-12)
+    assert_within(both.effective_dof(ERRORS) - 15.625, 1e-12)
     known = sensed([[0]], [[np.eye(3)]])
     assert np.isinf(known.effective_dof(ERRORS)).all()
     assert np.isinf(welch_satterthwaite(np.array([2.0]), np.array([0.0]))).all()
@@ -136,9 +136,9 @@ def test_significance_against_scipy(dof):
     covariance, vector = root @ root.T, random.normal(size=3)
     statistic = float(vector @ np.linalg.solve(covariance, vector))
     found = significance(vector, covariance, dof)
-    within(found.statistic / statistic - 1.0, 1e-10)
+    assert_within(found.statistic / statistic - 1.0, 1e-10)
     truth = stats.chi2.sf(statistic, 3) if math.isinf(dof) else stats.f.sf(statistic / 3, 3, dof)
-    within(found.probability / truth - 1.0, 1e-9)
+    assert_within(found.probability / truth - 1.0, 1e-9)
 
 
 def test_significance_without_errors():
