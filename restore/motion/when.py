@@ -8,7 +8,7 @@ value of the distance with golden sections, so that grazing passages are not mis
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from typing import Any
 
@@ -38,7 +38,8 @@ class Event:
     """One answer: the age (Ma), its 1-sigma from the errors of rows (Myr, NaN if not known or if the
     site does not move across), what happened forward in time, and where the site then was, degrees.
 
-    `distance_km`: to what was asked about, NaN for latitudes.
+    `distance_km`: to what was asked about, NaN for latitudes; `distance_sigma_km`: of a nearest approach,
+    1-sigma from the errors of rows.
     """
 
     age_ma: float
@@ -47,6 +48,7 @@ class Event:
     lat_deg: float
     lon_deg: float
     distance_km: float
+    distance_sigma_km: float = float("nan")
 
 
 class _Track:
@@ -229,7 +231,8 @@ def _distance_events(
         events = []
         for age in minima(track.edges, measure):
             distance = float(measure(np.array([age]))[0]) * radius_km
-            events.append(_event(track, age, float("nan"), 0.0, "nearest", distance))
+            event = _event(track, age, float("nan"), 0.0, "nearest", distance)
+            events.append(replace(event, distance_sigma_km=sigma(age) * radius_km))
         return events
     if not within_km > 0.0:
         raise InputError(f"within {within_km:g} km: must be above 0")
@@ -335,7 +338,7 @@ def as_columns(events: list[tuple[str, Event]]) -> dict[str, Any]:
     """Events as columns, each with the name of its site; `what` is `never` where there was none. Crossings
     are said as they happened, forward in time.
     """
-    names = ("age_ma", "age_sigma_myr", "what", "lat_deg", "lon_deg", "distance_km")
+    names = ("age_ma", "age_sigma_myr", "what", "lat_deg", "lon_deg", "distance_km", "distance_sigma_km")
     columns: dict[str, Any] = {"site": [name for name, _ in events]}
     for name in names:
         values = [getattr(event, name) for _, event in events]

@@ -101,6 +101,20 @@ def test_two_moving_sites_meet_when_a_fine_search_says():
     assert nearest.distance_km == pytest.approx(distance.min(), abs=1e-3)
 
 
+def test_how_near_is_given_with_its_error():
+    """Abeam of a fixed point the distance has the error across the path: 5 km rows, half way 2.5 km."""
+    circuit = spinning(np.eye(3) * (5.0 / R) ** 2)
+    site = Site(30.0, 0.0, "A")
+    abeam = lat_lon(place_at(circuit, site, 30.0))
+    # the path runs along the meridian of 0E: a point due east of it is nearest abeam
+    point = (float(abeam[0]), 5.0)
+    nearest = min(near_point(circuit, site, point, 0.0, 60.0), key=lambda e: e.distance_km)
+    assert np.isnan(nearest.age_sigma_myr)
+    # across the path a row's small rotation acts with sin(15)/sin(30) of itself at half of 60 degrees
+    across = 5.0 * np.sin(np.deg2rad(15.0)) / np.sin(np.deg2rad(30.0))
+    assert nearest.distance_sigma_km == pytest.approx(across, rel=0.02)
+
+
 def test_a_line_carried_by_its_plate():
     """A line on the frame itself is met when the site's path crosses it."""
     circuit, site = spinning(), Site(30.0, 0.0, "A")
