@@ -37,7 +37,8 @@ POSITIONS = ("lat_deg", "lon_deg")
 @click.option("--restored-age", type=Age(), help="With --frame: all positions at this age.")
 @click.option("--every-myr", type=click.FloatRange(min=0, min_open=True),
               help="More rows, for drawing; `asked` is false on them.")  # fmt: skip
-@click.option("--rates", is_flag=True, help="Instead: rates, azimuths and lengths, stage by stage.")
+@click.option("--rates", is_flag=True, help="Instead: rates, azimuths and lengths by the rows' own stages, from"
+              " the ridge to the oldest age.")  # fmt: skip
 @click.option("--at-km", metavar="START:STOP:STEP", help="Instead: the crust's age at distances from the"
               " ridge along each arm, km.")  # fmt: skip
 @click.option("--observed", metavar="FILE", help="Instead: how far observed points lie from the flowlines:"
@@ -69,7 +70,7 @@ def flowlines(
 ) -> int:
     """Both arms of the flowlines from ridge POINTS: start, lat_deg, lon_deg[, age_ma, on_plate].
 
-    Positions are in present-day coordinates of each plate unless --frame.
+    Distances of observed points are positive to the right, looking away from the ridge. Positions are in present-day coordinates of each plate unless --frame.
 
     \b
     oncewhere flowlines scenario_files/ridge.csv --between ovrath,quemmel --ages 0:60:5 \\

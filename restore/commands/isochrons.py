@@ -37,7 +37,7 @@ if TYPE_CHECKING:
     "--ridge-age", type=Age(), default=0.0, help="The age at which an extinct ridge lay there, Ma."
 )
 @click.option("--on-plate", default="", help="The plate whose coordinates an extinct ridge is given in.")
-@click.option("--longest-km", type=click.FloatRange(min=0, min_open=True),
+@click.option("--longest-km", type=click.FloatRange(min=0.1),
               help="Put points on the ridge line so that none are farther apart.")  # fmt: skip
 @click.option("--observed", metavar="FILE", help="Instead: how far picks lie from the isochrons of their age:"
               " plate, lat_deg, lon_deg, age_ma[, point, sigma_km].")  # fmt: skip
@@ -115,6 +115,8 @@ def _check_choices(
         raise click.UsageError("--by-stage needs --observed FILE")
     if (ages is None) == (chrons is None) and observed is None:
         raise click.UsageError("give either --ages or --chrons")
+    if on_plate and not ridge_age > 0.0:
+        raise click.UsageError("--on-plate goes with --ridge-age: today's ridge is on both plates")
     if ridge_age > 0.0 and not on_plate:
         raise click.UsageError("--ridge-age needs --on-plate: the plate whose coordinates the line is in")
 

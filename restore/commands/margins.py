@@ -55,6 +55,10 @@ def margin(
     oncewhere margin scenario_files/margin.geojson --between ovrath,ibbun --ages 0,20 \\
         --outlines scenario_files/outlines.geojson --history scenario_files/history.toml
     """
+    if total is not None and ages != (0.0,):
+        raise click.UsageError("--total says its own ages: leave out --ages")
+    if total is not None and not total[0] > total[1] >= 0.0:
+        raise click.UsageError("--total OLDER,YOUNGER: the older age first")
     if ages is None:
         raise click.UsageError("--ages own has no meaning here: give ages in Ma")
     from restore.files.lines import read_lines

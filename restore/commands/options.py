@@ -106,7 +106,7 @@ def radius_option(command: Decorated) -> Decorated:
     """--radius-km."""
     return click.option(
         "--radius-km",
-        type=click.FloatRange(min=0, min_open=True),
+        type=click.FloatRange(min=1.0, max=1e6),
         default=6371.0088,
         show_default=True,
         help="Radius of the sphere.",
@@ -236,6 +236,8 @@ def make_ground(
     """Outlines and crustal ages as the options name them; None if they name neither."""
     if outlines is None and within_km > 0.0:
         raise click.UsageError("--within-km needs --outlines")
+    if outlines is None and edges != "great-circle":
+        raise click.UsageError("--edges needs --outlines: sites have none")
     if outlines is None and crust_age is None:
         return None
     from restore.files.rasters import read_field

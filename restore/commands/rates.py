@@ -69,16 +69,7 @@ def rates(
     oncewhere rates --pole 56,-94,0.76 --at -28,-71
     oncewhere rates --plate ovrath --relative-to quemmel --at 10,-30 --history scenario_files/history.toml
     """
-    if (at is None) == (points is None):
-        raise click.UsageError("give either --at LAT,LON or --points FILE")
-    if (history_file is None) == (pole is None):
-        raise click.UsageError("give either --history FILE or --pole LAT,LON,DEG_PER_MYR")
-    if pole is None and (plate is None or relative_to is None):
-        raise click.UsageError("with --history give --plate and --relative-to")
-    if average is not None and (pole is not None or not average[0] > average[1] >= 0.0):
-        raise click.UsageError("--average OLDER,YOUNGER goes with --history, the older age first")
-    if ledger_file is not None and (pole is not None or not ledger_file.endswith((".json", ".txt"))):
-        raise click.UsageError("--ledger FILE.json or FILE.txt goes with --history")
+    _check_choices(at, points, history_file, pole, plate, relative_to, average, age_ma, ledger_file)
     from restore.files.points import beside
     from restore.files.tables import TableOut
     from restore.geometry.latitudes import Latitudes
@@ -101,7 +92,7 @@ def rates(
         inputs += history_inputs(history_file, history)
         asked = (history, plate, relative_to, lat, lon)
         if average is not None:
-            found = average_rates(*asked, *average, kind, radius_km, beyond)
+            found = average_rates(*asked, *average, at_on, kind, radius_km, beyond)
         else:
             found = rates_at(*asked, age_ma, at_on, kind, radius_km, beyond)
         if ledger_file is not None and found.ledger is not None:
@@ -124,6 +115,32 @@ def rates(
         target.add(beside(own, results))
 
 
+def _check_choices(
+    at: tuple[float, float] | None,
+    points: str | None,
+    history_file: str | None,
+    pole: tuple[float, float, float] | None,
+    plate: str | None,
+    relative_to: str | None,
+    average: tuple[float, float] | None,
+    age_ma: float,
+    ledger_file: str | None,
+) -> None:
+    """Options that do not go together."""
+    if (at is None) == (points is None):
+        raise click.UsageError("give either --at LAT,LON or --points FILE")
+    if (history_file is None) == (pole is None):
+        raise click.UsageError("give either --history FILE or --pole LAT,LON,DEG_PER_MYR")
+    if pole is None and (plate is None or relative_to is None):
+        raise click.UsageError("with --history give --plate and --relative-to")
+    if average is not None and age_ma:
+        raise click.UsageError("--average says its own ages: leave out --age")
+    if average is not None and (pole is not None or not average[0] > average[1] >= 0.0):
+        raise click.UsageError("--average OLDER,YOUNGER goes with --history, the older age first")
+    if ledger_file is not None and (pole is not None or not ledger_file.endswith((".json", ".txt"))):
+        raise click.UsageError("--ledger FILE.json or FILE.txt goes with --history")
+
+
 def _write_ledger(file: str, ledger: Ledger) -> None:
     """The chain behind the rates: at one age one entry, for a mean that of both ages."""
     import json
@@ -142,7 +159,7 @@ def _read_points(file: str, layout: Layout) -> tuple[dict[str, list[str]], list[
     from restore.files.lines import read_lines
     from restore.files.points import read_points
 
-    if not file.lower().endswith((".geojson", ".gpkg", ".shp")):
+    if not file.lower().endswith((".geojson", ".json", ".gpkg", ".shp")):
         return read_points(file, layout)
     lines = read_lines(file)
     own = {"line": [str(number) for number, one in enumerate(lines, 1) for _ in one.lat_deg]}

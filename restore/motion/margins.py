@@ -42,15 +42,15 @@ _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(8)
 class MarginLine:
     """Segments of today's line: ends (n, 3), which line each is of, and on which side the first plate is.
 
-    `first_on_left` (n,): whether the first plate lies to the left of the segment as drawn; `side_from`: how
-    that is known, `given`, `outlines` or `assumed`.
+    `first_on_left` (n,): whether the first plate lies to the left of the segment as drawn; `side_from` (n,): how
+    that is known, `given`, `outlines`, `other segments` of the same line, or `assumed`.
     """
 
     start: Floats
     end: Floats
     line: NDArray[np.int64]
     first_on_left: NDArray[np.bool_]
-    side_from: str = "given"
+    side_from: tuple[str, ...] = ()
 
     @property
     def middle(self) -> Floats:
@@ -94,15 +94,14 @@ def margin_line(
         numbers.append(np.full(len(dense) - 1, number))
     start, end, line = np.concatenate(starts), np.concatenate(ends), np.concatenate(numbers)
     on_left = np.ones(len(line), dtype=bool)
-    segments = MarginLine(start, end, line, on_left)
+    side_from = ("assumed",) * len(line)
+    segments = MarginLine(start, end, line, on_left, side_from)
     if left is not None:
         if left not in between:
             raise InputError(f"left = {left!r}: must be one of {' and '.join(between)}")
-        on_left, side_from = np.full(len(line), left == between[0]), "given"
+        on_left, side_from = np.full(len(line), left == between[0]), ("given",) * len(line)
     elif outlines is not None:
-        on_left, side_from = _side_by_outlines(segments, between, outlines), "outlines"
-    else:
-        side_from = "assumed"
+        on_left, side_from = _side_by_outlines(segments, between, outlines)
     return MarginLine(start, end, line, on_left, side_from)
 
 
@@ -116,21 +115,29 @@ def _left_normal(segments: MarginLine) -> Floats:
 
 def _side_by_outlines(
     segments: MarginLine, between: tuple[str, str], outlines: Outlines
-) -> NDArray[np.bool_]:
+) -> tuple[NDArray[np.bool_], tuple[str, ...]]:
     step = SIDE_STEP_KM / EARTH_RADIUS_KM * _left_normal(segments)
-    votes = np.zeros(len(segments.line), dtype=int)
+    count = len(segments.line)
+    votes = np.zeros(count, dtype=int)
+    seen: set[str] = set()
     for sign, on_this_side in ((1.0, between), (-1.0, between[::-1])):
         lat, lon = lat_lon(segments.middle + sign * step)
         found = outlines.plate_at(outlines.latitudes.outward(lat), lon).outline
         labels = np.array([*(outline.plate for outline in outlines.outlines), ""], dtype=object)[found]
         votes += (labels == on_this_side[0]).astype(int) - (labels == on_this_side[1]).astype(int)
-    total = int(votes.sum())
-    if not np.any(votes):
-        raise InputError(
-            f"the outlines show neither {between[0]} nor {between[1]} beside the line; name the plate on its"
-            " left"
-        )
-    return np.where(votes == 0, total > 0, votes > 0)
+        seen |= set(labels.tolist())
+    on_left = np.zeros(count, dtype=bool)
+    for number in np.unique(segments.line):
+        own = segments.line == number
+        if not np.any(votes[own]):
+            beside = ", ".join(sorted(seen - {""})) or "no plate"
+            raise InputError(
+                f"line {number + 1}: the outlines do not show {between[0]} on one side and {between[1]} on the"
+                f" other, {SIDE_STEP_KM:g} km off the line, but {beside}; bring it to the boundary, or name"
+                " the plate on its left"
+            )
+        on_left[own] = np.where(votes[own] == 0, votes[own].sum() > 0, votes[own] > 0)
+    return on_left, tuple("outlines" if vote else "other segments" for vote in votes.tolist())
 
 
 @dataclass(frozen=True, eq=False)
@@ -323,7 +330,7 @@ def margin_totals_table(
 def _sides(between: tuple[str, str], line: MarginLine, segments: NDArray[np.int64]) -> dict[str, list[str]]:
     """Which plate lies to the left of each segment as drawn, and how that is known."""
     left = [between[0] if on_left else between[1] for on_left in line.first_on_left[segments].tolist()]
-    return {"left_plate": left, "side_from": [line.side_from] * len(left)}
+    return {"left_plate": left, "side_from": [line.side_from[i] for i in segments.tolist()]}
 
 
 def _said(

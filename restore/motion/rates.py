@@ -124,6 +124,7 @@ def rates(
     lat, lon, age = np.broadcast_arrays(
         *(np.atleast_1d(np.asarray(a, dtype=np.float64)) for a in (lat_deg, lon_deg, age_ma))
     )
+    _check_points(lat, lon)
     circuit = Circuit(history, relative_to, beyond)
     circuit.at(plate, float(age[0]) if len(age) else 0.0)
     found = circuit.rotations(plate, age)
@@ -158,6 +159,16 @@ def rates(
     )
 
 
+def _check_points(lat_deg: Floats, lon_deg: Floats) -> None:
+    """Raise InputError for the first point that is not on the globe."""
+    for name, values, limit in (("lat_deg", lat_deg, 90.0), ("lon_deg", lon_deg, 360.0)):
+        bad = np.flatnonzero(~(np.abs(values) <= limit))
+        if len(bad):
+            raise InputError(
+                f"point {bad[0]}: {name} = {values[bad[0]]:g}: must lie in -{limit:g}..{limit:g}"
+            )
+
+
 def average_rates(
     history: History,
     plate: str,
@@ -166,16 +177,19 @@ def average_rates(
     lon_deg: ArrayLike,
     older_ma: float,
     younger_ma: float,
+    at_on: str = "plate",
     latitudes: Latitudes | None = None,
     radius_km: float = EARTH_RADIUS_KM,
     beyond: str = "refuse",
 ) -> Rates:
-    """Mean velocities of today's points (degrees) on `plate` between two ages (Ma).
+    """Mean velocities of `plate` at points (degrees) between two ages (Ma).
 
-    The stage `S = R(t1) R(t2)^-1` over its time, `w = log(S) / (t2 - t1)`, at the point half way along
-    the stage, in the partner's coordinates. Rows that both ages use cancel in the errors. Raises
+    The stage `S = R(t1) R(t2)^-1` over its time, `w = log(S) / (t2 - t1)`, in the partner's coordinates: at
+    today's point of the plate half way along the stage, or with `at_on = "relative-to"` at the point itself. Rows that both ages use cancel in the errors. Raises
     InputError if the ages are not in order, DomainError where the history has no answer.
     """
+    if at_on not in AT_ON:
+        raise InputError(f"at_on = {at_on!r}: must be one of {', '.join(AT_ON)}")
     kind = latitudes or Latitudes()
     stage = stage_pole(history, plate, relative_to, older_ma, younger_ma, beyond=beyond)
     lat, lon = np.broadcast_arrays(
@@ -183,8 +197,11 @@ def average_rates(
     )
     span = older_ma - younger_ma
     vector = stage.rotation.as_vectors()
-    older = Circuit(history, relative_to, beyond).at(plate, older_ma).rotations
-    then = stage.rotation.power(0.5).apply(older.apply(unit_vectors(kind.inward(lat), lon)))
+    _check_points(lat, lon)
+    then = unit_vectors(kind.inward(lat), lon)
+    if at_on == "plate":
+        older = Circuit(history, relative_to, beyond).at(plate, older_ma).rotations
+        then = stage.rotation.power(0.5).apply(older.apply(then))
     omega = np.broadcast_to(vector / span, then.shape)
     east, north = tangent_frame(then)
     moving = cross(omega, then) * radius_km
@@ -257,6 +274,7 @@ def rates_from_pole(
     lat, lon = np.broadcast_arrays(
         *(np.atleast_1d(np.asarray(a, dtype=np.float64)) for a in (lat_deg, lon_deg))
     )
+    _check_points(lat, lon)
     then = unit_vectors(kind.inward(lat), lon)
     axis = unit_vectors(kind.inward(pole_lat_deg), pole_lon_deg)
     omega = np.broadcast_to(axis * np.deg2rad(rate_deg_per_myr), then.shape)

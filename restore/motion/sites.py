@@ -394,6 +394,9 @@ class _Restoring:
                 done = "held at" if self.circuit.beyond == "hold" else "extended beyond"
                 said = f"{done} {ends[row]:g} Ma"
                 remarks[row] = f"{remarks[row]}; {said}" if remarks[row] else said
+        for row in np.flatnonzero((status == OLDER_THAN_CRUST) | (status == NOT_FORMED)).tolist():
+            if not remarks[row]:
+                remarks[row] = f"its crust is {self.placing.host_ma[row // repeat]:g} Myr old"
         for row, remark in enumerate(self.placing.remark):
             if remark:
                 some = slice(row * repeat, (row + 1) * repeat)

@@ -15,7 +15,8 @@ from restore.history.store import History
 from restore.motion.flowlines import FlowlineMaker, Flowlines, Spreading
 from restore.motion.ridge_points import RidgePoints
 from restore.motion.shares import Shares
-from restore.motion.trails import Hotspots, TrailMaker, Trails
+from restore.motion.trails import Hotspots, Trails
+from restore.motion.trails import trails as trails_of
 
 Columns = Mapping[str, Sequence[Any]]
 Ages = str | float | Iterable[float]
@@ -56,7 +57,7 @@ def flowlines(
 
 
 def trails(
-    hotspots: str | os.PathLike[str] | Columns,
+    hotspots: str | os.PathLike[str] | Columns | Hotspots,
     history: History,
     plate: str,
     frame: str,
@@ -75,15 +76,15 @@ def trails(
     over lies today, or `passage`, the plate's path over the hotspot. Raises InputError for hotspots or
     ages at fault, UnknownPlateError for an unknown label.
     """
-    if isinstance(hotspots, (str, os.PathLike)):
-        table = Hotspots.read(hotspots, paths)
-    else:
+    if not isinstance(hotspots, (str, os.PathLike, Hotspots)):
         lat, lon = (
             np.asarray(_needed(hotspots, name), dtype=np.float64) for name in ("lat_deg", "lon_deg")
         )
-        table = Hotspots([str(name) for name in _needed(hotspots, "hotspot")], lat, lon)
-    maker = TrailMaker(history, plate, frame, Latitudes(latitudes), radius_km, beyond)
-    return maker.make(table, ages, shown)
+        hotspots = Hotspots([str(name) for name in _needed(hotspots, "hotspot")], lat, lon)
+    return trails_of(
+        hotspots, history, plate, frame, ages,
+        shown=shown, paths=paths, latitudes=latitudes, radius_km=radius_km, beyond=beyond,
+    )  # fmt: skip
 
 
 def _needed(columns: Columns, name: str) -> Sequence[Any]:

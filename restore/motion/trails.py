@@ -181,6 +181,8 @@ class TrailMaker:
         radius_km: float = EARTH_RADIUS_KM,
         beyond: str = "refuse",
     ) -> None:
+        if plate == frame:
+            raise InputError(f"plate and frame are both {plate!r}: nothing moves over a hotspot there")
         self.history, self.plate, self.radius_km = history, plate, radius_km
         self.circuit = Circuit(history, frame, beyond)
         self.circuit.covered(plate)
@@ -279,8 +281,13 @@ def compare_samples(
     `samples`: see `read_samples`. Columns: `along_km`, distance along the trail from the hotspot, and
     `across_km`, off the trail, positive to the right looking towards older crust; `predicted_age_ma` of
     the trail there; `age_difference_myr`, the sample's age less the predicted one; `along_difference_km`,
-    how much farther along the trail the sample lies than its own age says. NaN without an age.
+    how much farther along the trail the sample lies than its own age says. NaN without an age. A sample
+    whose nearest point is the old end of the trail has no predicted age: how far the trail goes was only a
+    matter of what was asked. `age_difference_sigmas` counts the sample's own age sigma alone. Raises
+    InputError if no trail is asked for, that is only one age.
     """
+    if not oldest_ma > 0.0:
+        raise InputError("ages: samples are held against a trail: ask for an age above 0")
     curves = {
         name: maker.curve(hotspots, number, oldest_ma) for number, name in enumerate(hotspots.hotspot)
     }
@@ -294,10 +301,12 @@ def compare_samples(
         foot = curve.nearest(points)
         mine = np.array([label in {name, ""} for label in labels], dtype=bool)
         better = mine & ~(np.abs(found["across_km"]) <= np.abs(foot.across_km))
+        past = foot.age_ma >= curve.ages[-1] - 1e-9
+        predicted = np.where(past, np.nan, foot.age_ma)
         age = samples.numbers["age_ma"]
         expected = np.interp(age, curve.ages, curve.along_km, left=np.nan, right=np.nan)
         values = (
-            *(foot.along_km, foot.across_km, foot.age_ma, age - foot.age_ma),
+            *(foot.along_km, foot.across_km, predicted, age - predicted),
             foot.along_km - expected,
         )
         for column, value in zip(names, values, strict=True):
@@ -316,6 +325,11 @@ def compare_samples(
         columns["age_difference_sigmas"] = np.where(
             sigma > 0.0, found["age_difference_myr"] / sigma, np.nan
         )
+    ended = np.isnan(found["predicted_age_ma"]) & ~np.isnan(found["along_km"])
+    columns["sample_note"] = [
+        "nearest to the old end of the trail" if end else "" for end in ended.tolist()
+    ]
+    columns["errors"] = ["age of the sample only"] * count
     return {**columns, **{n: v for n, v in samples.own.items() if n not in columns}}
 
 

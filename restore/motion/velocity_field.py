@@ -107,7 +107,18 @@ def write_velocity_field(
     provenance: Mapping[str, Any],
     radius_km: float = EARTH_RADIUS_KM,
 ) -> None:
-    """Write velocities (mm/yr) at ages (Ma) to a CF netCDF file, one age in memory at a time."""
+    """Write velocities (mm/yr) at ages (Ma) to a CF netCDF file, one age in memory at a time.
+
+    Raises InputError for a name that does not end in .nc, DomainError for an age at which no plate has a
+    chain to the frame.
+    """
+    if not os.fspath(path).lower().endswith(".nc"):
+        raise InputError(f"{os.fspath(path)}: a field is written as netCDF; end the name in .nc")
+    codes = np.array(sorted(grid.members), dtype=np.int64)
+    for age in ages:
+        _, status, _ = circuit.find(codes, np.full(len(codes), age))
+        if len(codes) and not np.any(status == REACHED):
+            raise circuit.no_answer(circuit.plates[int(codes[0])], age, int(status[0]))
     from netCDF4 import Dataset
 
     with whole_file(path) as part, Dataset(part, "w") as file:

@@ -216,6 +216,9 @@ def _event(
 ) -> Event:
     lat, lon = lat_lon(track.places(np.array([age]))[0])
     age_sigma = abs(sigma_rad / slope) if slope != 0.0 else float("nan")
+    if age_sigma > track.edges[-1] - track.edges[0]:
+        # a grazing passage: the linear form says nothing of its age
+        age_sigma = float("nan")
     return Event(age, age_sigma, what, float(track.kind.outward(lat)), float(lon), distance_km)
 
 
@@ -231,7 +234,9 @@ def _distance_events(
         events = []
         for age in minima(track.edges, measure):
             distance = float(measure(np.array([age]))[0]) * radius_km
-            event = _event(track, age, float("nan"), 0.0, "nearest", distance)
+            at_end = bool(np.any(np.abs(track.edges[[0, -1]] - age) < 1e-6))
+            what = "nearest at the end of the range" if at_end else "nearest"
+            event = _event(track, age, float("nan"), 0.0, what, distance)
             events.append(replace(event, distance_sigma_km=sigma(age) * radius_km))
         return events
     if not within_km > 0.0:

@@ -166,7 +166,7 @@ def test_a_stated_encoding(restore):
         (["--ages", "0,ten"], 2, "ages '0,ten': 'ten' is not a number; write own, 0,10,20 or 0:120:10"),
         (["--ages", "10:0:5"], 2, "ages '10:0:5': the step must be above 0 and stop not below start"),
         (["--ages", "0,-5"], 2, "ages '0,-5': -5: ages are finite, in Ma, positive into the past"),
-        (["--radius-km", "0"], 2, "0.0 is not in the range x>0"),
+        (["--radius-km", "0"], 2, "0.0 is not in the range 1.0<=x<=1000000.0"),
         (["--latitudes", "geocentric"], 2, "'geocentric' is not one of 'as-given', 'geodetic'"),
         (["--frame-kind", "core"], 2, "'core' is not one of 'plate', 'mantle', 'spin-axis'"),
         (["--draws", "0"], 2, "0 is not in the range x>=1"),

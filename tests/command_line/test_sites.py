@@ -109,7 +109,7 @@ def test_crust_that_was_not_yet_there(restore):
     assert answer.code == 0
     assert [row["status"] for row in answer.rows] == ["restored"] * 3 + ["crust not yet formed"]
     note = "sample is younger than the asked age"
-    assert [row["restored_note"] for row in answer.rows] == ["", note, note, ""]
+    assert [row["restored_note"] for row in answer.rows] == ["", note, note, "its crust is 8 Myr old"]
     assert answer.said == ["4 rows: 1 crust not yet formed, 3 restored"]
 
 

@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy.spatial.transform import Rotation
 
 from restore.errors import InputError
 from restore.files.tables import honest_errors
@@ -107,3 +108,28 @@ def test_where_draws_and_the_linear_form_part(sigma_deg, apart):
     assert linear == pytest.approx(2.4477 * along, rel=1e-4)
     # on a line 95 % lie within 1.96 sigma; 4000 draws give that to about 2 %
     assert bool(abs(drawn / (1.96 * along) - 1.0) > 0.1) is apart
+
+
+def test_a_mean_rate_at_a_place_of_the_partner():
+    """Held in the partner's coordinates the mean is the stage's own velocity there: log(S) / t x p."""
+    rows = [Row("A", "B", t, 60.0 + t / 10.0, 20.0, -0.5 * t) for t in (0.0, 20.0, 40.0, 60.0)]
+    history = History.from_rows(rows)
+    found = average_rates(history, "A", "B", -30.0, -20.0, 60.0, 20.0, "relative-to")
+    turns = [Rotation.from_quat(q, scalar_first=True) for q in history.rows.rotations().quaternions]
+    omega = (turns[1] * turns[3].inv()).as_rotvec() / 40.0
+    lat, lon = np.deg2rad([-30.0, -20.0])
+    place = np.array([np.cos(lat) * np.cos(lon), np.cos(lat) * np.sin(lon), np.sin(lat)])
+    velocity = np.cross(omega, place) * 6371.0088
+    east = np.array([-np.sin(lon), np.cos(lon), 0.0])
+    assert found.east_mm_yr[0] == pytest.approx(velocity @ east, abs=1e-9)
+    assert found.north_mm_yr[0] == pytest.approx(velocity @ np.cross(place, east), abs=1e-9)
+    on_plate = average_rates(history, "A", "B", -30.0, -20.0, 60.0, 20.0)
+    assert abs(on_plate.azimuth_deg[0] - found.azimuth_deg[0]) > 1.0
+
+
+@pytest.mark.parametrize(("lat", "lon"), [(-130.0, 0.0), (np.nan, 0.0), (10.0, 400.0)])
+def test_points_off_the_globe_are_refused(lat, lon):
+    """In Python as on the command line."""
+    history = History.from_rows([Row("A", "B", 0.0, 0, 0, 0.0), Row("A", "B", 40.0, 30.0, 20.0, 30.0)])
+    with pytest.raises(InputError, match=r"point 0: l(at|on)_deg = .*: must lie in"):
+        rates(history, "A", "B", [lat], [lon])

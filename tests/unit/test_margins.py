@@ -135,7 +135,9 @@ def test_the_side_comes_from_outlines(tmp_path):
         segments = margin_line([line], ("A", "B"), outlines=outlines)
         assert set(margin_rates(history, ("A", "B"), segments).regime) == {"opening"}
     far = (np.array([50.0, 60.0]), np.array([100.0, 100.0]))
-    with pytest.raises(InputError, match="show neither A nor B beside the line"):
+    with pytest.raises(
+        InputError, match="do not show A on one side and B on the other, 2 km off the line, but no plate"
+    ):
         margin_line([far], ("A", "B"), outlines=outlines)
 
 

@@ -156,11 +156,14 @@ def test_the_public_face(tmp_path):
 
 
 def test_a_path_that_ends_ends_the_trail(tmp_path):
-    """Beyond the hotspot's path there is no trail to be near; beyond the history none can be asked."""
+    """A sample nearest to where the trail ends has no predicted age: it may lie on crust of any older age;
+    beyond the history no trail can be asked."""
     path = tmp_path / "samples.csv"
     path.write_text("lat_deg,lon_deg\n0,-29\n0,-60\n", encoding="utf-8")
     moving = still(paths={"h": (np.array([0.0, 20.0]), np.array([0.0, 0.0]), np.array([0.0, -10.0]))})
     columns = compare_samples(maker(), moving, read_samples(path, moving), 40.0)
-    assert columns["predicted_age_ma"] == pytest.approx([29.0 / 1.5, 20.0], abs=2e-3)
+    assert columns["predicted_age_ma"][0] == pytest.approx(29.0 / 1.5, abs=2e-3)
+    assert np.isnan(columns["predicted_age_ma"][1])
+    assert columns["sample_note"] == ["", "nearest to the old end of the trail"]
     with pytest.raises(OutsideHistoryError):
         compare_samples(maker(), moving, read_samples(path, moving), 50.0)

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 import xarray as xr
 
-from restore.errors import InputError
+from restore.errors import InputError, OutsideHistoryError
 from restore.history.circuit import Circuit
 from restore.history.store import History
 from restore.motion.rates import rates
@@ -37,20 +37,30 @@ def test_cells_move_as_their_plates_do(world):
 
 
 def test_the_file_is_cf_and_holds_every_age(world, tmp_path):
-    """Opened by xarray: axes, units, flags, provenance; values those of the field, beyond it NaN."""
+    """Opened by xarray: axes, units, flags, provenance; values those of the field."""
     _, circuit, outlines = world
     grid = grid_on_plates(circuit, outlines, 45.0)
-    write_velocity_field(tmp_path / "v.nc", circuit, grid, (0.0, 35.0, 130.0), "mantle", {"made": "here"})
+    write_velocity_field(tmp_path / "v.nc", circuit, grid, (0.0, 35.0), "mantle", {"made": "here"})
     with xr.open_dataset(tmp_path / "v.nc", decode_times=False) as data:
         assert data.restored_age.attrs["units"] == "Myr"
-        assert data.sizes == {"restored_age": 3, "lat": 4, "lon": 8}
+        assert data.sizes == {"restored_age": 2, "lat": 4, "lon": 8}
         assert json.loads(data.attrs["provenance"]) == {"made": "here"}
         expected = velocities_at(circuit, grid, 35.0, 6371.0088)["east_mm_yr"]
         np.testing.assert_allclose(data.east_mm_yr[1], expected, rtol=1e-6)
-        assert np.isnan(data.east_mm_yr[2]).all()
         words = data.plate.attrs["flag_meanings"].split()
         assert words[int(data.plate[0, 0])] == "glufta"
     assert [p.name for p in tmp_path.iterdir()] == ["v.nc"]
+
+
+def test_a_field_that_would_be_empty_is_refused(world, tmp_path):
+    """An age at which no plate has a chain, and a name that is no netCDF: one clear error, no file."""
+    _, circuit, outlines = world
+    grid = grid_on_plates(circuit, outlines, 45.0)
+    with pytest.raises(OutsideHistoryError, match="at 130 Ma: outside the history"):
+        write_velocity_field(tmp_path / "v.nc", circuit, grid, (0.0, 130.0), "mantle", {})
+    with pytest.raises(InputError, match="a field is written as netCDF; end the name in .nc"):
+        write_velocity_field(tmp_path / "v.csv", circuit, grid, (0.0,), "mantle", {})
+    assert list(tmp_path.iterdir()) == []
 
 
 def test_a_step_that_does_not_divide_the_globe(world):
