@@ -58,7 +58,7 @@ def test_a_field_that_would_be_empty_is_refused(world, tmp_path):
     grid = grid_on_plates(circuit, outlines, 45.0)
     with pytest.raises(OutsideHistoryError, match="at 130 Ma: outside the history"):
         write_velocity_field(tmp_path / "v.nc", circuit, grid, (0.0, 130.0), "mantle", {})
-    with pytest.raises(InputError, match="a field is written as netCDF; end the name in .nc"):
+    with pytest.raises(InputError, match=r"a field is written as netCDF; end the name in \.nc"):
         write_velocity_field(tmp_path / "v.csv", circuit, grid, (0.0,), "mantle", {})
     assert list(tmp_path.iterdir()) == []
 
