@@ -32,7 +32,7 @@ _HOMES = {
     "restore_sites": "restore.motion.sites",
     "run_scenario": "restore.scenario.run",
     "stage_pole": "restore.history.poles",
-    "trails": "restore.motion.spreading",
+    "trails": "restore.motion.trails",
 }
 
 __all__ = sorted(_HOMES)  # noqa: PLE0605
@@ -59,7 +59,8 @@ if TYPE_CHECKING:
     from restore.motion.lines import restore_lines
     from restore.motion.rates import rates
     from restore.motion.sites import restore_sites
-    from restore.motion.spreading import flowlines, trails
+    from restore.motion.spreading import flowlines
+    from restore.motion.trails import trails
     from restore.scenario.run import run_scenario
 
 

@@ -1,12 +1,10 @@
-"""The plain doors to flowlines and trails: a file or columns in memory, a history, and what is asked."""
+"""The plain door to flowlines: a file or columns in memory, a history, and what is asked."""
 
 from __future__ import annotations
 
 import os
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
-
-import numpy as np
 
 from restore.errors import InputError
 from restore.geometry.latitudes import Latitudes
@@ -15,8 +13,6 @@ from restore.history.store import History
 from restore.motion.flowlines import FlowlineMaker, Flowlines, Spreading
 from restore.motion.ridge_points import RidgePoints
 from restore.motion.shares import Shares
-from restore.motion.trails import Hotspots, Trails
-from restore.motion.trails import trails as trails_of
 
 Columns = Mapping[str, Sequence[Any]]
 Ages = str | float | Iterable[float]
@@ -54,37 +50,6 @@ def flowlines(
         known = {name: points[name] for name in ("start", "age_ma", "on_plate") if name in points}
         starts = RidgePoints.of(_needed(points, "lat_deg"), _needed(points, "lon_deg"), between, **known)
     return FlowlineMaker(spreading, starts).make(starts, None)
-
-
-def trails(
-    hotspots: str | os.PathLike[str] | Columns | Hotspots,
-    history: History,
-    plate: str,
-    frame: str,
-    ages: Ages,
-    *,
-    shown: str = "crust",
-    paths: str | os.PathLike[str] | None = None,
-    latitudes: str = "as-given",
-    radius_km: float = EARTH_RADIUS_KM,
-    beyond: str = "refuse",
-) -> Trails:
-    """The trails that hotspots, which stand in `frame`, left on a plate, at ages (Ma).
-
-    `hotspots`: a table, or columns in memory, `hotspot, lat_deg, lon_deg` (degrees); `paths`: a table
-    `hotspot, age_ma, lat_deg, lon_deg` of those that move. `shown`: `crust`, where the crust that passed
-    over lies today, or `passage`, the plate's path over the hotspot. Raises InputError for hotspots or
-    ages at fault, UnknownPlateError for an unknown label.
-    """
-    if not isinstance(hotspots, (str, os.PathLike, Hotspots)):
-        lat, lon = (
-            np.asarray(_needed(hotspots, name), dtype=np.float64) for name in ("lat_deg", "lon_deg")
-        )
-        hotspots = Hotspots([str(name) for name in _needed(hotspots, "hotspot")], lat, lon)
-    return trails_of(
-        hotspots, history, plate, frame, ages,
-        shown=shown, paths=paths, latitudes=latitudes, radius_km=radius_km, beyond=beyond,
-    )  # fmt: skip
 
 
 def _needed(columns: Columns, name: str) -> Sequence[Any]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -64,6 +64,16 @@ class Hotspots:
         raise_faults(TableError, findings)
         moving = {} if paths is None else _read_paths(paths, labels)
         return cls(labels, table.numbers["lat_deg"], table.numbers["lon_deg"], moving, table.own)
+
+    @classmethod
+    def of(cls, columns: Mapping[str, Sequence[Any]]) -> Hotspots:
+        """From columns in memory, all still; raises InputError for a column that is missing."""
+        for name in ("hotspot", "lat_deg", "lon_deg"):
+            if name not in columns:
+                had = ", ".join(map(str, columns))
+                raise InputError(f"column {name!r} is missing; the columns are {had}")
+        lat, lon = (np.asarray(columns[name], dtype=np.float64) for name in ("lat_deg", "lon_deg"))
+        return cls([str(name) for name in columns["hotspot"]], lat, lon)
 
     def places(self, number: int, ages: Floats, latitudes: Latitudes) -> Floats:
         """Where a hotspot stood in the frame at each age: unit vectors `(k, 3)`, NaN outside its path."""
@@ -249,7 +259,7 @@ class TrailMaker:
 
 
 def trails(
-    hotspots: str | os.PathLike[str] | Hotspots,
+    hotspots: str | os.PathLike[str] | Mapping[str, Sequence[Any]] | Hotspots,
     history: History,
     plate: str,
     frame: str,
@@ -263,12 +273,15 @@ def trails(
 ) -> Trails:
     """The lines that hotspots in a frame leave on a plate, at ages in Ma.
 
-    `hotspots`: a table `hotspot, lat_deg, lon_deg` (degrees), or Hotspots; `paths`: where those that move
+    `hotspots`: a table `hotspot, lat_deg, lon_deg` (degrees), the same columns in memory, or Hotspots; `paths`: where those that move
     stood, `hotspot, age_ma, lat_deg, lon_deg`. `shown`: `crust`, where the crust that passed over each
     lies today, or `passage`, the path of the crust that today lies over it. Raises TableError or
     InputError for what is at fault, UnknownPlateError for an unknown label.
     """
-    table = hotspots if isinstance(hotspots, Hotspots) else Hotspots.read(hotspots, paths)
+    if isinstance(hotspots, Mapping):
+        table = Hotspots.of(hotspots)
+    else:
+        table = hotspots if isinstance(hotspots, Hotspots) else Hotspots.read(hotspots, paths)
     maker = TrailMaker(history, plate, frame, Latitudes(latitudes), radius_km, beyond)
     return maker.make(table, ages, shown)
 
